@@ -1,0 +1,1 @@
+"""The cohort layer of ramulus."""

@@ -1,0 +1,1 @@
+"""The image layer of ramulus."""

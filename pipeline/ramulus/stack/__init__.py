@@ -1,0 +1,1 @@
+"""The stack layer of ramulus."""

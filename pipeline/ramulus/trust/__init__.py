@@ -1,0 +1,1 @@
+"""The trust layer of ramulus."""
