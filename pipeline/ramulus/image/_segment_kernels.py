@@ -131,3 +131,43 @@ def inside_into(image, weight0, sum0, weight1, sum1, coarser, z_start, z_stop, o
                         w = sample_clamped(weight1, cz, cy, cx)
                         inside = w > 0.0 and value * w > sample_clamped(sum1, cz, cy, cx)
                 out[z, y, x] = inside
+
+
+@numba.njit(cache=True, nogil=True)
+def size_of_parts(labels, strong, sizes, marked):
+    """Voxels of each label, and whether a strong half-size cell lies in it."""
+    for z in range(labels.shape[0]):
+        for y in range(labels.shape[1]):
+            for x in range(labels.shape[2]):
+                label = labels[z, y, x]
+                if label:
+                    sizes[label] += 1
+                    if strong[z // 2, y // 2, x // 2]:
+                        marked[label] = True
+
+
+@numba.njit(cache=True, nogil=True)
+def keep_parts(labels, keep, z_start, z_stop, out):
+    """out = keep[label], with label 0 never kept."""
+    for z in range(z_start, z_stop):
+        for y in range(labels.shape[1]):
+            for x in range(labels.shape[2]):
+                label = labels[z, y, x]
+                out[z, y, x] = label != 0 and keep[label]
+
+
+@numba.njit(cache=True, nogil=True)
+def half_maximum(values, z_start, z_stop, out):
+    """Maximum over 2 x 2 x 2 cells into out[z_start:z_stop]."""
+    nz, ny, nx = values.shape
+    for z in range(z_start, z_stop):
+        z1 = min(2 * z + 1, nz - 1)
+        for y in range(out.shape[1]):
+            y1 = min(2 * y + 1, ny - 1)
+            for x in range(out.shape[2]):
+                x1 = min(2 * x + 1, nx - 1)
+                a = max(values[2 * z, 2 * y, 2 * x], values[2 * z, 2 * y, x1])
+                b = max(values[2 * z, y1, 2 * x], values[2 * z, y1, x1])
+                c = max(values[z1, 2 * y, 2 * x], values[z1, 2 * y, x1])
+                d = max(values[z1, y1, 2 * x], values[z1, y1, x1])
+                out[z, y, x] = max(max(a, b), max(c, d))

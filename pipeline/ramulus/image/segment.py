@@ -173,10 +173,9 @@ def _winning(response: np.ndarray, finer: np.ndarray) -> np.ndarray:
 
 def _pooled(values: np.ndarray) -> np.ndarray:
     """Maximum over 2 x 2 x 2 cells."""
-    shape = tuple((n + 1) // 2 for n in values.shape)
-    padded = np.zeros(tuple(2 * n for n in shape), values.dtype)
-    padded[: values.shape[0], : values.shape[1], : values.shape[2]] = values
-    return padded.reshape(shape[0], 2, shape[1], 2, shape[2], 2).max(axis=(1, 3, 5))
+    out = np.empty(tuple((n + 1) // 2 for n in values.shape), np.float32)
+    in_threads(lambda a, b: kernels.half_maximum(values, a, b, out), out.shape[0])
+    return out
 
 
 def _spread(values: np.ndarray) -> np.ndarray:
@@ -229,19 +228,15 @@ def _without_weak_parts(inside: np.ndarray, strong: np.ndarray, settings: Segmen
     labels, count = cc3d.connected_components(inside, connectivity=26, return_N=True)
     if not count:
         return inside
-    sizes = np.bincount(labels.ravel(), minlength=count + 1)
-    keep = np.zeros(count + 1, bool)
-    z, y, x = np.nonzero(strong)
-    for dz in (0, 1):
-        for dy in (0, 1):
-            for dx in (0, 1):
-                zz = np.minimum(2 * z + dz, inside.shape[0] - 1)
-                yy = np.minimum(2 * y + dy, inside.shape[1] - 1)
-                xx = np.minimum(2 * x + dx, inside.shape[2] - 1)
-                keep[np.unique(labels[zz, yy, xx])] = True
-    keep &= sizes >= settings.part_min_voxels
-    keep[0] = False
-    return keep[labels]
+    sizes, marked = np.zeros(count + 1, np.int64), np.zeros(count + 1, bool)
+    kernels.size_of_parts(labels, strong, sizes, marked)
+    return _kept(labels, marked & (sizes >= settings.part_min_voxels))
+
+
+def _kept(labels: np.ndarray, keep: np.ndarray) -> np.ndarray:
+    out = np.empty(labels.shape, bool)
+    in_threads(lambda a, b: kernels.keep_parts(labels, keep, a, b, out), labels.shape[0])
+    return out
 
 
 def _filled(inside: np.ndarray, settings: SegmentSettings, spacing_um: tuple[float, float, float]) -> np.ndarray:
@@ -251,11 +246,10 @@ def _filled(inside: np.ndarray, settings: SegmentSettings, spacing_um: tuple[flo
     labels, count = cc3d.connected_components(~inside, connectivity=6, return_N=True)
     if count <= 1:
         return inside
-    sizes = np.bincount(labels.ravel(), minlength=count + 1)
     keep = np.zeros(count + 1, bool)
     for face in (labels[0], labels[-1], labels[:, 0], labels[:, -1], labels[:, :, 0], labels[:, :, -1]):
         keep[np.unique(face)] = True
     if settings.cavity_max_um3 is not None:
+        sizes = np.bincount(labels.ravel(), minlength=count + 1)
         keep |= sizes * math.prod(spacing_um) > settings.cavity_max_um3
-    keep[0] = True
-    return inside | ~keep[labels]
+    return ~_kept(labels, keep)
