@@ -9,7 +9,7 @@ import numpy as np
 from .._settings import Settings, setting
 from ..errors import UnusableInputError
 from ..network.graph import NODE_KINDS, CentrelineGraph
-from .paths import PARTING_SLOPE, Box, bent_path, keeps_clear
+from .paths import PARTING_SLOPE, Box, arc_length_um, bent_path, keeps_clear
 
 __all__ = ["TreeSettings", "daughters_of", "grow", "optimal_angles_deg"]
 
@@ -374,7 +374,12 @@ def _clear(
     joined: list[tuple[np.ndarray, np.ndarray]],
 ) -> bool:
     """Tell whether a new path keeps clear of all vessels, of those at its junction from it on."""
-    gaps = {"clearance_um": settings.clearance_um, "step_um": settings.step_um}
-    return keeps_clear(path, radius, *others, **gaps) and all(
-        keeps_clear(path, radius, *line, shared_node=True, **gaps) for line in joined
-    )
+
+    def clear(line: tuple[np.ndarray, np.ndarray], arc_um: np.ndarray | None) -> bool:
+        return keeps_clear(
+            path, radius, *line, clearance_um=settings.clearance_um, step_um=settings.step_um,
+            arc_um=arc_um,
+        )  # fmt: skip
+
+    arc_um = arc_length_um(path)
+    return clear(others, None) and all(clear(line, arc_um) for line in joined)

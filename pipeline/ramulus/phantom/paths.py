@@ -7,7 +7,9 @@ import numpy as np
 from ..network.graph import CentrelineGraph
 from ._clearance_kernels import smallest_gap
 
-__all__ = ["PARTING_SLOPE", "Box", "bent_path", "keeps_clear", "segments_keep_clear"]
+__all__ = [
+    "PARTING_SLOPE", "Box", "arc_length_um", "bent_path", "keeps_clear", "segments_keep_clear",
+]  # fmt: skip
 
 # Two vessels that share a junction must part at least this fast: their distance is at least this
 # share of the arc length from the junction until they are clear of each other (about 44 degrees).
@@ -102,9 +104,12 @@ def keeps_clear(
     *,
     clearance_um: float,
     step_um: float,
-    shared_node: bool = False,
+    arc_um: np.ndarray | None = None,
 ) -> bool:
-    """Tell whether a path from its first point keeps its clearance from others' points.
+    """Tell whether a path keeps its clearance from others' points.
+
+    With `arc_um`, the path's arc length from the node that it shares with the others, the path may
+    be nearer where it has parted by `PARTING_SLOPE` times that length.
 
     Distances are taken between points, which stand for the stretch of half a step on either side:
     a step is added to the clearance, so that the lines themselves keep it.
@@ -114,13 +119,18 @@ def keeps_clear(
     reach = radius_um + clearance_um + step_um + float(np.max(other_radius_um))
     low, high = path_um.min(axis=0) - reach, path_um.max(axis=0) + reach
     near = ((others_um >= low) & (others_um <= high)).all(axis=1)
-    arc = np.concatenate(([0.0], np.cumsum(np.linalg.norm(np.diff(path_um, axis=0), axis=1))))
+    arc = np.zeros(len(path_um)) if arc_um is None else arc_um
     enough = clearance_um + step_um
     gap = smallest_gap(
         path_um, np.full(len(path_um), radius_um), arc, others_um[near], other_radius_um[near],
-        PARTING_SLOPE if shared_node else 0.0, enough,
+        0.0 if arc_um is None else PARTING_SLOPE, enough,
     )  # fmt: skip
     return bool(gap >= enough)
+
+
+def arc_length_um(path_um: np.ndarray) -> np.ndarray:
+    """(n,) arc length of each point of a path from its first."""
+    return np.concatenate(([0.0], np.cumsum(np.linalg.norm(np.diff(path_um, axis=0), axis=1))))
 
 
 def segments_keep_clear(
@@ -128,23 +138,26 @@ def segments_keep_clear(
 ) -> np.ndarray:
     """(m,) bool: which segments keep their clearance from all the others.
 
-    Segments that share a node are judged from that node on, where they part gradually.
+    Segments that share a node are judged from that node on, where they part gradually. A segment
+    is not judged against itself.
     """
     clear = np.ones(graph.n_segments, dtype=bool)
-    position, radius = graph.point_position_um, graph.point_radius_um
     owner = graph.point_segment
+    ends = graph.segment_nodes[owner]
     for segment, (a, b) in enumerate(graph.segment_nodes):
         points = graph.points_of(segment)
-        path, r = position[points], float(radius[points].max())
-        ends = graph.segment_nodes[owner]
-        for start, line in ((a, path), (b, path[::-1])):
-            touching = (ends == start).any(axis=1) & (owner != segment)
+        path, radius = graph.point_position_um[points], graph.point_radius_um[points]
+        arc = arc_length_um(path)
+        at_a, at_b = (ends == a).any(axis=1), (ends == b).any(axis=1)
+        for others, from_node in (
+            (~at_a & ~at_b, None),
+            (at_a & ~at_b, arc),
+            (at_b & ~at_a, arc[-1] - arc),
+            (at_a & at_b & (owner != segment), np.minimum(arc, arc[-1] - arc)),
+        ):
             clear[segment] &= keeps_clear(
-                line, r, position[touching], radius[touching], clearance_um=clearance_um,
-                step_um=step_um, shared_node=True,
+                path, float(radius.max()), graph.point_position_um[others],
+                graph.point_radius_um[others], clearance_um=clearance_um, step_um=step_um,
+                arc_um=from_node,
             )  # fmt: skip
-        apart = ~np.isin(ends, (a, b)).any(axis=1)
-        clear[segment] &= keeps_clear(
-            path, r, position[apart], radius[apart], clearance_um=clearance_um, step_um=step_um
-        )
     return clear
