@@ -8,12 +8,13 @@ from collections.abc import Callable
 from dataclasses import dataclass, field
 
 import numpy as np
-from ramulus.network.graph import CentrelineGraph
 from scipy.optimize import linear_sum_assignment
 from scipy.sparse import coo_array
 from scipy.sparse.csgraph import connected_components
 from scipy.spatial import cKDTree
 from scipy.spatial.distance import cdist
+
+from ramulus.network.graph import CentrelineGraph
 
 RADIUS_CLASSES_VOXELS = ((0.0, 1.2), (1.2, 2.0), (2.0, 3.0), (3.0, 5.0), (5.0, np.inf))
 
@@ -86,9 +87,11 @@ def score(
         centreline_precision=_share(real, measured_line),
         length_ratio=length,
         loops=loops(measured), true_loops=loops(truth),
-        components=_components(measured), true_components=_components(truth),
+        components=_components(measured),
+        true_components=_components(truth),
         segments=measured.n_segments, true_segments=truth.n_segments,
-        ends=int((measured.node_degree() == 1).sum()), true_ends=int((truth.node_degree() == 1).sum()),
+        ends=int((measured.node_degree() == 1).sum()),
+        true_ends=int((truth.node_degree() == 1).sum()),
         radius_errors=_radius_errors(measured, truth, coarse, fine),
         hindrance_ratio=float("nan") if hindrance is None else hindrance(measured) / hindrance(truth),
         unmatched_true_um=junctions[3], unmatched_measured_um=junctions[4],
@@ -153,7 +156,7 @@ class _Line:
 
 
 def _dense(graph: CentrelineGraph, step_um: float) -> _Line:
-    """Cut every step between two points into pieces of at most `step_um`; a point in each middle."""
+    """Cut every step between points into pieces of at most `step_um`; a point in each middle."""
     later = np.ones(graph.n_points, dtype=bool)
     later[graph.point_offsets[:-1]] = False
     b = np.flatnonzero(later)
@@ -176,7 +179,7 @@ def _dense(graph: CentrelineGraph, step_um: float) -> _Line:
 
 
 def _near(line: _Line, other: _Line, limit: np.ndarray | None) -> tuple[np.ndarray, np.ndarray]:
-    """Distance of each point to the other line (or whether within a limit) and the nearest point."""
+    """Distance to the other line (or whether within a limit), and the nearest point, of each."""
     if not len(other.place_um) or not len(line.place_um):
         return np.zeros(len(line.place_um), dtype=bool), np.zeros(len(line.place_um), np.int64)
     distance, nearest = cKDTree(other.place_um).query(line.place_um)

@@ -25,8 +25,7 @@ def smallest_gap(points, radius, arc, others, other_radius, slope, enough):
             if slope > 0.0 and distance >= slope * arc[i]:
                 continue
             gap = distance - radius[i] - other_radius[j]
-            if gap < smallest:
-                smallest = gap
+            smallest = min(smallest, gap)
             if smallest < enough:
                 return smallest
     return smallest

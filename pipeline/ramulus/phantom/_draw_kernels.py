@@ -118,15 +118,16 @@ def cover_plane(
     nearest = np.full((ny, nx), _FAR)
     light = np.zeros((ny, nx))
     size = np.ones((ny, nx))
-    rows = np.empty((len(chosen), 2), dtype=np.int64)
+    first_row = np.empty(len(chosen), dtype=np.int64)
+    after_row = np.empty(len(chosen), dtype=np.int64)
     reach = np.empty(len(chosen))
     for item in range(len(chosen)):
         p = chosen[item]
         reach[item] = max(radii[p, 0], radii[p, 1]) / np.sqrt(flatness[p]) + wall + 2.0 * half_cell
         low = min(starts[p, 1], ends[p, 1]) - reach[item]
         high = max(starts[p, 1], ends[p, 1]) + reach[item]
-        rows[item] = _window(low, high, origin[1], step[1], ny)
-        for i in range(rows[item, 0], rows[item, 1]):
+        first_row[item], after_row[item] = _window(low, high, origin[1], step[1], ny)
+        for i in range(first_row[item], after_row[item]):
             y = origin[1] + i * step[1]
             j0, j1 = _row(z, y, p, starts, ends, reach[item], origin[2], step[2], nx)
             for j in range(j0, j1):
@@ -145,7 +146,7 @@ def cover_plane(
     sub_distance = np.full((n_edge, splits[0] * splits[1] * splits[2]), _FAR)
     for item in range(len(chosen)):
         p = chosen[item]
-        for i in range(rows[item, 0], rows[item, 1]):
+        for i in range(first_row[item], after_row[item]):
             y = origin[1] + i * step[1]
             j0, j1 = _row(z, y, p, starts, ends, reach[item], origin[2], step[2], nx)
             for j in range(j0, j1):
@@ -198,7 +199,9 @@ def _split(z, y, x, p, starts, ends, radii, flatness, wide_axis, step, splits, s
 @numba.njit(cache=True, nogil=True)
 def _fill_edge_cells(sub_distance, index, light, size, step, splits, wall, lumen_level, plane):
     """Fill the cells that a surface may cross with the mean over their sub-cells."""
-    sub_step = step / splits
+    sub_step = np.empty(3)
+    for k in range(3):
+        sub_step[k] = step[k] / splits[k]
     square = sub_step[0] ** 2 + sub_step[1] ** 2 + sub_step[2] ** 2
     for i in range(plane.shape[0]):
         for j in range(plane.shape[1]):
@@ -241,22 +244,36 @@ def _width(sub_distance, cell, u, v, w, splits, sub_step):
 
 
 @numba.njit(cache=True, nogil=True)
-def _reduce_rows(fine, weights, factor, out):
-    """out[i, c] = sum over q of weights[q] fine[i, c * factor + q], the zeros of `fine` skipped."""
-    n_out = out.shape[1]
-    taps = len(weights)
-    row = np.empty(n_out)
+def _outputs(q, taps, factor, n_out):
+    """Return the first output that cell q feeds and the one after the last."""
+    return max(0, (q - taps + factor) // factor), min(n_out, q // factor + 1)
+
+
+@numba.njit(cache=True, nogil=True)
+def _reduce_plane(fine, weights_y, weights_x, factors, out):
+    """out[d, c] = sum over p, q of weights_y[p] weights_x[q] fine[d * fy + p, c * fx + q].
+
+    First along x, then along y; the zeros of `fine` are skipped.
+    """
+    ny, nx = out.shape
+    row = np.empty(nx)
+    total = np.zeros((ny, nx))
     for i in range(fine.shape[0]):
-        row[:] = 0.0
+        for c in range(nx):
+            row[c] = 0.0
         for q in range(fine.shape[1]):
-            value = fine[i, q]
-            if value != 0.0:
-                for c in range(
-                    max(0, (q - taps + factor) // factor), min(n_out - 1, q // factor) + 1
-                ):
-                    row[c] += weights[q - c * factor] * value
-        for c in range(n_out):
-            out[i, c] = row[c]
+            if fine[i, q] != 0.0:
+                first, after = _outputs(q, len(weights_x), factors[2], nx)
+                for c in range(first, after):
+                    row[c] += weights_x[q - c * factors[2]] * fine[i, q]
+        first, after = _outputs(i, len(weights_y), factors[1], ny)
+        for d in range(first, after):
+            weight = weights_y[i - d * factors[1]]
+            for c in range(nx):
+                total[d, c] += weight * row[c]
+    for d in range(ny):
+        for c in range(nx):
+            out[d, c] = total[d, c]
 
 
 @numba.njit(cache=True, nogil=True, parallel=True)
@@ -264,23 +281,16 @@ def signal_planes(
     first_z, members, member_offsets, starts, ends, radii, brightness, flatness, wide_axis, origin,
     step, splits, wall, lumen_level, fine_shape, factors, weights_y, weights_x, out,
 ):  # fmt: skip
-    """Cover each fine plane and reduce it to the image's grid along x and y; planes run parallel."""
+    """Cover each fine plane and reduce it to the image's grid along y and x, planes in parallel."""
     for k in numba.prange(out.shape[0]):
-        chosen = members[member_offsets[k] : member_offsets[k + 1]]
-        if len(chosen) == 0:
-            out[k] = 0.0
-            continue
-        plane = np.zeros((fine_shape[0], fine_shape[1]))
-        z = origin[0] + (first_z + k) * step[0]
-        cover_plane(
-            z, chosen, starts, ends, radii, brightness, flatness, wide_axis, origin, step, splits,
-            wall, lumen_level, plane,
-        )  # fmt: skip
-        rows = np.zeros((fine_shape[0], out.shape[2]))
-        _reduce_rows(plane, weights_x, factors[2], rows)
-        columns = np.zeros((out.shape[2], out.shape[1]))
-        _reduce_rows(rows.T.copy(), weights_y, factors[1], columns)
-        out[k] = columns.T
+        if member_offsets[k + 1] > member_offsets[k]:
+            plane = np.zeros((fine_shape[0], fine_shape[1]))
+            cover_plane(
+                origin[0] + (first_z + k) * step[0],
+                members[member_offsets[k] : member_offsets[k + 1]], starts, ends, radii, brightness,
+                flatness, wide_axis, origin, step, splits, wall, lumen_level, plane,
+            )  # fmt: skip
+            _reduce_plane(plane, weights_y, weights_x, factors, out[k])
 
 
 @numba.njit(cache=True, nogil=True, parallel=True)

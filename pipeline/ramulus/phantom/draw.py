@@ -72,8 +72,8 @@ class DrawSettings(Settings):
     dtype: Literal["uint8", "uint16", "float32"] = setting("uint8", "type of the grey values")
     oversampling: int = setting(
         0,
-        "fine cells per voxel and axis that are blurred; 0 takes 1 to 4 so that the blur's SD spans "
-        "at least 1.5 fine cells",
+        "fine cells per voxel and axis that are blurred; 0 takes 1 to 4, so that the blur's SD "
+        "spans at least 1.5 of them",
         source="edge response within 0.01 of the exact one, computed for steps at any offset",
         ge=0,
         le=8,
@@ -133,8 +133,8 @@ def draw(
 
     Every segment is the union of round cones along its points: balls whose centres and radii run
     linearly from point to point. Vessels are joined (no brighter where they overlap), averaged over
-    each voxel, blurred, lit, and made noisy. A vessel that ends in a `border` node runs on beyond the
-    volume. The image is the same however many threads draw it.
+    each voxel, blurred, lit, and made noisy. A vessel that ends in a `border` node runs on beyond
+    the volume. The image is the same however many threads draw it.
 
     Parameters
     ----------
@@ -210,10 +210,14 @@ def compose(
         msg = "point_radius_um: found a radius that is not > 0, expected one at every point to draw"
         raise UnusableInputError(msg)
     sigma_voxels = np.asarray(settings.sigma_um) / spacing
-    cones = _cones(graph, settings, seed, shape, np.asarray(origin_um), flatness, wide_axis)
-    return Scene(
-        settings, seed, shape, spacing, origin_um, *cones, _factors(sigma_voxels, settings)
+    starts, ends, radii, brightness, flat, axis = _cones(
+        graph, settings, seed, shape, np.asarray(origin_um), flatness, wide_axis
     )
+    return Scene(
+        settings=settings, seed=seed, shape=shape, spacing_um=spacing, origin_um=origin_um,
+        starts=starts, ends=ends, radii=radii, brightness=brightness, flatness=flat,
+        wide_axis=axis, factors=_factors(sigma_voxels, settings),
+    )  # fmt: skip
 
 
 def draw_slab(scene: Scene, z0: int, z1: int) -> np.ndarray:
@@ -321,7 +325,7 @@ def _beyond_the_border(
 
 
 def _end_direction(path: np.ndarray, radius: float) -> np.ndarray:
-    """Unit vector along the last stretch of a path, one radius long or the last step."""
+    """Return the unit vector along the last radius of a path, or along its last step."""
     away = np.linalg.norm(path[:-1] - path[-1], axis=1)
     far = np.flatnonzero(away >= radius)
     back = path[far[-1]] if len(far) else path[0]
@@ -385,9 +389,10 @@ def _debris(
     if len(axis_points):
         reach = np.concatenate([radii[:, 0], radii.max(axis=1), radii[:, 1]])
         # a wide vessel further away may be nearer with its wall: look at several axis points
-        far, which = cKDTree(axis_points).query(centre, k=min(64, len(axis_points)))
-        gap = (far - reach[which]).min(axis=1) if far.ndim == 2 else far - reach[which]
-        clear = gap - size >= settings.debris_clearance_um + settings.wall_um
+        near = np.arange(1, min(64, len(axis_points)) + 1)
+        far, which = cKDTree(axis_points).query(centre, k=near)
+        gap = np.min(far - reach[which], axis=1) - settings.wall_um
+        clear = gap - size >= settings.debris_clearance_um
         centre, size = centre[clear], size[clear]
     return centre[: settings.debris], size[: settings.debris]
 
@@ -419,7 +424,7 @@ def _signal(scene: Scene, z0: int, z1: int) -> np.ndarray:
     first = int(z0 * scene.factors[0] - halo[0])
     n_planes = int((z1 - z0) * scene.factors[0] + 2 * halo[0])
     members, offsets = _members(scene, origin[0] + first * step[0], step[0], n_planes)
-    planes = np.empty((n_planes, *scene.shape[1:]), dtype=np.float32)
+    planes = np.zeros((n_planes, *scene.shape[1:]), dtype=np.float32)
     splits = np.clip(np.ceil(4 * step / spacing.min()), 2, 20).astype(np.int64)
     signal_planes(
         first, members, offsets, scene.starts, scene.ends, scene.radii, scene.brightness,

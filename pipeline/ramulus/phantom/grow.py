@@ -347,7 +347,7 @@ def _directions(
 def _within(
     settings: TreeSettings, box: Box, path: np.ndarray, radius: float, parent_radius: float
 ) -> tuple[np.ndarray, int]:
-    """Return the path, cut where a face cuts it cleanly, and the face; an empty path if it may not."""
+    """Return the path, cut where a face cuts it cleanly, and the face (-1: none); or empty."""
     nothing = np.zeros((0, 3))
     cut, face = box.cut(path)
     depth = box.depth_um(cut)
@@ -358,7 +358,7 @@ def _within(
     steep = abs(step[face % 3]) >= _STEEPEST_FACE * np.linalg.norm(step)
     length = np.linalg.norm(np.diff(cut, axis=0), axis=1).sum()
     long_enough = length >= _shortest(settings, radius, parent_radius)
-    # until the last approach the path keeps clear of the face that cuts it, and always of the others
+    # until its last approach it keeps clear of the face that cuts it, and always of the others
     to_go = np.linalg.norm(cut - cut[-1], axis=1)
     depth[:, face] = np.where(to_go <= 2 * room, room, depth[:, face])
     if settings.leaves == "inside" or not steep or not long_enough or depth.min() < room:

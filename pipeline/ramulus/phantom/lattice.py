@@ -1,4 +1,4 @@
-"""Weave loop networks: a jittered mesh whose nodes join three vessels, cut by the volume's faces."""
+"""Weave loop networks: a jittered mesh of junctions of three vessels, cut by the volume's faces."""
 
 from dataclasses import dataclass
 
@@ -16,10 +16,15 @@ from .paths import Box, segments_keep_clear
 
 __all__ = ["LatticeSettings", "weave"]
 
-# The net of degree 3 and highest symmetry in space ((10,3)-a): eight nodes a cubic cell, each joined
-# to the three at sqrt(2)/4 of the cell's edge, at 120 degrees. Its shortest rings have ten nodes.
-# Wells, Three-dimensional nets and polyhedra, 1977 (recalled from memory; degree and ring are tested).
-_CELL = np.array([[1, 1, 1], [3, 7, 5], [7, 5, 3], [5, 3, 7], [5, 5, 5], [7, 3, 1], [3, 1, 7], [1, 7, 3]]) / 8  # fmt: skip
+# The net of degree 3 and highest symmetry in space, (10,3)-a: eight nodes a cubic cell, each joined
+# to the three at sqrt(2)/4 of the cell's edge, at 120 degrees; its shortest rings have ten nodes.
+# Wells, Three-dimensional nets and polyhedra, 1977 (recalled from memory; the tests count).
+_CELL = (
+    np.array(
+        [[1, 1, 1], [3, 7, 5], [7, 5, 3], [5, 3, 7], [5, 5, 5], [7, 3, 1], [3, 1, 7], [1, 7, 3]]
+    )
+    / 8
+)
 _EDGE = np.sqrt(2) / 4
 _STEEPEST_FACE = 0.5  # cosine to a face's normal below which a crossing would graze the face
 _ATTEMPTS = 6  # meshes that are tried, each with less jitter
@@ -101,8 +106,8 @@ def weave(
         if paths and len(chains.ends) >= len(chains.node_um):  # at least one loop
             return _graph(chains, paths, radius, shape, spacing_um)
     msg = (
-        f"lattice.spacing_um: found {settings.spacing_um} um between junctions, with which no loop of "
-        f"clear vessels fits into {shape} voxels; smaller fills a volume, wider clears the vessels"
+        f"lattice.spacing_um: found {settings.spacing_um} um between junctions, with which no loop "
+        f"of clear vessels fits into {shape} voxels; try shorter ones, or less clearance_um"
     )
     raise UnusableInputError(msg)
 
@@ -164,7 +169,7 @@ def _crossing(box: Box, start: np.ndarray, toward: np.ndarray, room_um: float) -
 
 
 def _thinned(mesh: nx.Graph, settings: LatticeSettings, rng: np.random.Generator) -> nx.Graph:
-    """Leave out a share of the edges, then dead ends inside, and keep the largest connected part."""
+    """Leave out a share of the edges, then dead ends inside; keep the largest connected part."""
     graph = mesh.copy()
     edges = sorted(graph.edges)
     dropped = rng.permutation(len(edges))[: int(settings.missing * len(edges))]

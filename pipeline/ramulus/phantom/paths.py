@@ -30,7 +30,7 @@ class Box:
         return cls(-0.5 * spacing, (np.asarray(shape) - 0.5) * spacing)
 
     def depth_um(self, points_um: np.ndarray) -> np.ndarray:
-        """(n, 6) distance of each point from the faces z-low, y-low, x-low, z-high, ...; < 0 outside."""
+        """(n, 6) distance of each point from faces z-low, y-low, x-low, z-high...; < 0 outside."""
         return np.concatenate([points_um - self.low_um, self.high_um - points_um], axis=1)
 
     def cut(self, path_um: np.ndarray) -> tuple[np.ndarray, int]:
