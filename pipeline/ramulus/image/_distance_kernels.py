@@ -36,11 +36,13 @@ def square_along_planes(column, row_start, nx, row_step, rows, plane_rows, spaci
 
     `plane_rows` holds the first row of each plane, `rows` how many rows a plane has.
     """
-    lines = np.zeros((nx, rows), dtype=np.float32)
+    # A few values more than a row needs: row lengths of a power of two would share cache sets.
+    lines = np.zeros((nx, rows + 17), dtype=np.float32)
+    lowered = np.empty(rows, dtype=np.float32)
     vertex = np.empty(rows + 2, dtype=np.int64)
-    height = np.empty(rows + 2, dtype=np.float64)
-    border = np.empty(rows + 3, dtype=np.float64)
+    border = np.empty(rows + 2, dtype=np.float64)
     filled = np.zeros(nx, dtype=np.bool_)
+    scale = spacing * spacing
     for first_row in plane_rows:
         for k in range(rows):
             row = first_row + k * row_step
@@ -49,7 +51,7 @@ def square_along_planes(column, row_start, nx, row_step, rows, plane_rows, spaci
                 filled[column[i]] = True
         for x in range(nx):
             if filled[x]:
-                _lower_runs(lines[x], spacing, vertex, height, border)
+                _lower_line(lines[x, :rows], scale, lowered, vertex, border)
         for k in range(rows):
             row = first_row + k * row_step
             for i in range(row_start[row], row_start[row + 1]):
@@ -61,8 +63,11 @@ def square_along_planes(column, row_start, nx, row_step, rows, plane_rows, spaci
 
 
 @numba.njit(cache=True, nogil=True)
-def _lower_runs(line, spacing, vertex, height, border):
-    """Replace each run of values above zero by the lower envelope of its parabolas."""
+def _lower_line(line, scale, lowered, vertex, border):
+    """Replace each run of values above zero by the lower envelope of its parabolas.
+
+    The background just outside a run stands at height 0. Beyond a face of the volume there is none.
+    """
     n = len(line)
     first = 0
     while first < n:
@@ -70,36 +75,65 @@ def _lower_runs(line, spacing, vertex, height, border):
             first += 1
             continue
         last = first
+        highest = line[first]
         while last + 1 < n and line[last + 1] != 0.0:
             last += 1
-        _lower_run(line, first, last, spacing * spacing, vertex, height, border)
+            highest = max(highest, line[last])
+        stop = min(last + 2, n)
+        if highest <= _NEAR * scale or last - first < 2 * _NEAR_STEPS:
+            _search(line, max(first - 1, 0), first, last + 1, stop, scale, lowered)
+        else:
+            _envelope(
+                line, max(first - 1, 0), first, last + 1, stop, scale, lowered, vertex, border
+            )
+        for place in range(first, last + 1):
+            line[place] = lowered[place]
         first = last + 1
 
 
+_NEAR_STEPS = 12
+_NEAR = _NEAR_STEPS**2
+
+
 @numba.njit(cache=True, nogil=True)
-def _lower_run(line, first, last, scale, vertex, height, border):
-    """Lower envelope over one run; background voxels just outside it stand at height 0."""
+def _search(line, start, first, last, stop, scale, lowered):
+    """Lowest parabola at each place by looking outwards: faster while distances are short."""
+    for place in range(first, last):
+        best = np.float64(line[place])
+        step = 1
+        while step * step * scale < best and (place - step >= start or place + step < stop):
+            rise = step * step * scale
+            if place - step >= start:
+                best = min(best, rise + line[place - step])
+            if place + step < stop:
+                best = min(best, rise + line[place + step])
+            step += 1
+        lowered[place] = best
+
+
+@numba.njit(cache=True, nogil=True)
+def _envelope(line, start, first, last, stop, scale, lowered, vertex, border):
+    """Lowest parabola at each place by the lower envelope: time in proportion to the run."""
     count = 0
-    for place in range(max(first - 1, 0), min(last + 1, len(line) - 1) + 1):
-        value = np.float64(line[place]) / scale
+    for place in range(start, stop):
+        value = np.float64(line[place])
         if value == np.inf:
             continue
         cut = -np.inf
         while count > 0:
             p = vertex[count - 1]
-            cut = 0.5 * (place + p + (value - height[count - 1]) / (place - p))
+            cut = 0.5 * (place + p + (value - line[p]) / (scale * (place - p)))
             if cut > border[count - 1]:
                 break
             count -= 1
         vertex[count] = place
-        height[count] = value
         border[count] = cut if count > 0 else -np.inf
         count += 1
-    if count == 0:
-        return
     k = 0
-    for place in range(first, last + 1):
+    for place in range(first, last):
         while k + 1 < count and border[k + 1] < place:
             k += 1
-        step = place - vertex[k]
-        line[place] = (step * step + height[k]) * scale
+        lowered[place] = np.inf
+        if count > 0:
+            step = place - vertex[k]
+            lowered[place] = step * step * scale + line[vertex[k]]

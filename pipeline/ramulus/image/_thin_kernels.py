@@ -13,16 +13,63 @@ import numpy as np
 from ._simple_points import CENTRE, is_simple
 
 
+_HALF = 24
+_LOW = (1 << _HALF) - 1
+_ROUNDS = (0x9E3779B1, 0x85EBCA77, 0xC2B2AE3D)
+TOP_LEVEL = (1 << 15) - 1
+
+
 @numba.njit(cache=True, nogil=True)
-def set_bits(words, addresses, on):
-    """Set or clear the bits at these addresses."""
+def order_keys(linear, distance_um, level_um):
+    """Number each voxel for the order of removal: distance level, then a one-to-one hash.
+
+    The hash is a Feistel network over the two halves of the voxel's 48-bit place in the volume, so
+    no two voxels share a key and the place can be read back from it.
+    """
+    keys = np.empty(len(linear), dtype=np.int64)
+    for i in range(len(linear)):
+        left, right = linear[i] >> _HALF, linear[i] & _LOW
+        for factor in _ROUNDS:
+            left, right = right, left ^ (((right + 1) * factor >> 17) & _LOW)
+        level = min(np.int64(distance_um[i] / level_um + 0.5), TOP_LEVEL)
+        keys[i] = (level << (2 * _HALF)) | (left << _HALF) | right
+    return keys
+
+
+@numba.njit(cache=True, nogil=True)
+def addresses_of_keys(keys, ny, nx, row_bits):
+    """Read the voxels' bit addresses back from their keys."""
+    addresses = np.empty(len(keys), dtype=np.int64)
+    for i in range(len(keys)):
+        left, right = (keys[i] >> _HALF) & _LOW, keys[i] & _LOW
+        for k in range(len(_ROUNDS)):
+            factor = _ROUNDS[len(_ROUNDS) - 1 - k]
+            left, right = right ^ (((left + 1) * factor >> 17) & _LOW), left
+        addresses[i] = address_of((left << _HALF) | right, ny, nx, row_bits)
+    return addresses
+
+
+@numba.njit(cache=True, nogil=True)
+def addresses_of(linear, ny, nx, row_bits):
+    """Bit addresses of voxels given by their place in the flattened volume."""
+    addresses = np.empty(len(linear), dtype=np.int64)
+    for i in range(len(linear)):
+        addresses[i] = address_of(linear[i], ny, nx, row_bits)
+    return addresses
+
+
+@numba.njit(cache=True, nogil=True)
+def address_of(linear, ny, nx, row_bits):
+    """Bit address in the padded volume of one voxel of the flattened volume."""
+    row = linear // nx
+    return (row + 2 * (row // ny) + ny + 3) * row_bits + (linear - row * nx) + 1
+
+
+@numba.njit(cache=True, nogil=True)
+def set_bits(words, addresses):
+    """Set the bits at these addresses."""
     for address in addresses:
-        word = address >> 5
-        bit = 1 << (address & 31)
-        if on:
-            words[word] = np.uint32(np.int64(words[word]) | bit)
-        else:
-            words[word] = np.uint32(np.int64(words[word]) & ~bit)
+        words[address >> 5] = np.uint32(np.int64(words[address >> 5]) | (1 << (address & 31)))
 
 
 @numba.njit(cache=True, nogil=True)
@@ -71,18 +118,6 @@ def erode(words, addresses, anchored, keep_ends, row_words, plane_words):
                 changed = True
         count = kept
     return count
-
-
-@numba.njit(cache=True, nogil=True)
-def add_while_simple(words, addresses, row_words, plane_words):
-    """Set bits one after another while each is new and leaves the topology as it is."""
-    for i in range(len(addresses)):
-        code = neighbourhood(words, addresses[i], row_words, plane_words)
-        if code & CENTRE or not is_simple(code):
-            return i
-        word = addresses[i] >> 5
-        words[word] = np.uint32(np.int64(words[word]) | (1 << (addresses[i] & 31)))
-    return len(addresses)
 
 
 @numba.njit(cache=True, nogil=True)
@@ -157,49 +192,141 @@ def geodesic(start, neighbour, position_um, sources):
 
 
 @numba.njit(cache=True, nogil=True)
-def accept_tips(order, is_cap, distance, before, radius, marked, protrusion):
-    """Walk back from each candidate tip to what is marked already; keep the tips that protrude.
-
-    A tip is kept when the part of its path outside the ball of the place where it meets the marked
-    set is long enough: longer than `protrusion` times its own radius there (or half the ball's, if
-    that is more) for a free tip, longer than nothing for a cap. A kept path is marked. Returns for
-    each candidate the voxel where the vessel ends: the place after which the radius falls faster
-    than half the path's gain (the sides of a blunt end) is cut off; -1 where it is not kept.
-    """
-    ending = np.full(len(order), -1, dtype=np.int64)
-    for k in range(len(order)):
-        tip = order[k]
-        if marked[tip]:
+def label_sets(start, neighbour, member):
+    """Number the connected sets of member voxels in order of their first voxel; -1 elsewhere."""
+    n = len(start) - 1
+    label = np.full(n, -1, dtype=np.int64)
+    stack = np.empty(n, dtype=np.int64)
+    count = 0
+    for seed in range(n):
+        if not member[seed] or label[seed] >= 0:
             continue
-        base = tip
+        label[seed] = count
+        stack[0] = seed
+        height = 1
+        while height > 0:
+            height -= 1
+            i = stack[height]
+            for k in range(start[i], start[i + 1]):
+                j = neighbour[k]
+                if member[j] and label[j] < 0:
+                    label[j] = count
+                    stack[height] = j
+                    height += 1
+        count += 1
+    return label, count
+
+
+@numba.njit(cache=True, nogil=True)
+def accept_tips(tips, is_cap, distance, before, radius, marked, protrusion):
+    """Tell which candidate tips stand out from what is marked, in the order given.
+
+    The path from a tip is followed back to the first marked voxel. A free tip is accepted when the
+    lumen's end lies further outside the inscribed ball there than `protrusion` times the branch's
+    own radius outside that ball, or times half the ball's where that is more; a cap is accepted
+    when it lies outside the ball at all. The path of an accepted tip is marked.
+    """
+    accepted = np.zeros(len(tips), dtype=np.bool_)
+    for k in range(len(tips)):
+        base = tips[k]
         while base >= 0 and not marked[base]:
             base = before[base]
-        if base < 0:
+        if base < 0 or base == tips[k]:
             continue
         ball = radius[base]
-        own = 0.0
-        best = tip
-        best_worth = -np.inf
-        i = tip
+        wide = 0.5 * ball
+        i = tips[k]
         while i != base:
-            run = distance[i] - distance[base]
-            if run > ball:
-                own = max(own, radius[i])
-            worth = radius[i] + 0.5 * run
-            if worth > best_worth:
-                best_worth = worth
-                best = i
+            if distance[i] - distance[base] > ball:
+                wide = max(wide, radius[i])
             i = before[i]
-        run = distance[tip] - distance[base]
+        run = distance[tips[k]] - distance[base]
         if is_cap[k]:
-            if run <= ball:
+            accepted[k] = run > ball
+        else:
+            accepted[k] = run + radius[tips[k]] - ball > protrusion * wide
+        if accepted[k]:
+            i = tips[k]
+            while i != base:
+                marked[i] = True
+                i = before[i]
+    return accepted
+
+
+@numba.njit(cache=True, nogil=True)
+def blunt_ends(tips, start, neighbour, position_um, radius, reach):
+    """Find where each free end's axis stops and which way it points.
+
+    From the tip inwards, while the path does not fork and for `reach` radii, the axis' end is the
+    place with the greatest radius less half its distance from the tip: the path towards the edge of
+    a blunt end loses radius faster than that, a tapering vessel more slowly. Returns the voxel of
+    the end and one about two radii further in, -1 where the path has no such place.
+    """
+    end = np.full(len(tips), -1, dtype=np.int64)
+    inner = np.full(len(tips), -1, dtype=np.int64)
+    for k in range(len(tips)):
+        last, i = np.int64(-1), tips[k]
+        run, best_run, best, widest = 0.0, 0.0, -np.inf, 0.0
+        while i >= 0:
+            widest = max(widest, radius[i])
+            if radius[i] - 0.5 * run > best:
+                best, best_run = radius[i] - 0.5 * run, run
+                end[k] = i
+                inner[k] = -1
+            elif inner[k] < 0 and run - best_run >= 2.0 * radius[end[k]]:
+                inner[k] = i
+            if run > reach * widest:
+                break
+            following = np.int64(-1)
+            if start[i + 1] - start[i] <= 2:
+                for m in range(start[i], start[i + 1]):
+                    if neighbour[m] != last:
+                        following = neighbour[m]
+            if following >= 0:
+                step = 0.0
+                for axis in range(3):
+                    step += (position_um[i, axis] - position_um[following, axis]) ** 2
+                run += np.sqrt(step)
+            last, i = i, following
+        if inner[k] < 0 and last != end[k]:
+            inner[k] = last
+    return end, inner
+
+
+@numba.njit(cache=True, nogil=True)
+def run_out(inside, words, end_um, direction_um, radius_um, spacing_um, row_words, plane_words):
+    """Set the voxels on each straight line from an end outwards, while it stays in the lumen.
+
+    A line also stops where another voxel would change the topology, or after three radii. Returns
+    the addresses that were set.
+    """
+    added = np.empty(64, dtype=np.int64)
+    count = 0
+    stride = 0.5 * spacing_um.min()
+    for k in range(len(end_um)):
+        unit = direction_um[k] / np.sqrt((direction_um[k] ** 2).sum())
+        last = np.int64(-1)
+        for step in range(int(3.0 * radius_um[k] / stride) + 1):
+            z = int(np.rint((end_um[k, 0] + step * stride * unit[0]) / spacing_um[0]))
+            y = int(np.rint((end_um[k, 1] + step * stride * unit[1]) / spacing_um[1]))
+            x = int(np.rint((end_um[k, 2] + step * stride * unit[2]) / spacing_um[2]))
+            if not (0 <= z < inside.shape[0] and 0 <= y < inside.shape[1]):
+                break
+            if not (0 <= x < inside.shape[2] and inside[z, y, x]):
+                break
+            address = 32 * ((z + 1) * plane_words + (y + 1) * row_words) + x + 1
+            if address == last:
                 continue
-            best = tip
-        elif run + radius[tip] - ball <= protrusion * max(own, 0.5 * ball):
-            continue
-        ending[k] = best
-        i = best
-        while i != base:
-            marked[i] = True
-            i = before[i]
-    return ending
+            last = address
+            if step == 0:
+                continue
+            if words[address >> 5] >> (address & 31) & 1:
+                break
+            if not is_simple(neighbourhood(words, address, row_words, plane_words)):
+                break
+            words[address >> 5] = np.uint32(np.int64(words[address >> 5]) | (1 << (address & 31)))
+            if count == len(added):
+                added = np.append(added, np.empty(count, dtype=np.int64))
+            added[count] = address
+            count += 1
+    return added[:count]

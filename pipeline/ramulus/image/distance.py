@@ -102,7 +102,8 @@ def vessel_voxels(inside: np.ndarray, *, spacing_um: Sequence[float]) -> VesselV
     row_start = np.searchsorted(row, np.arange(nz * ny + 1))
     squared = np.empty(len(linear), dtype=np.float32)
     square_along_rows(column, row_start, nx, spacing[2], squared)
-    planes = np.unique(row // ny) * ny
-    square_along_planes(column, row_start, nx, 1, ny, planes, spacing[1], squared)
-    square_along_planes(column, row_start, nx, ny, nz, np.unique(row % ny), spacing[0], squared)
+    occupied = np.diff(row_start).reshape(nz, ny) > 0
+    z_planes, y_planes = np.flatnonzero(occupied.any(axis=1)), np.flatnonzero(occupied.any(axis=0))
+    square_along_planes(column, row_start, nx, 1, ny, z_planes * ny, spacing[1], squared)
+    square_along_planes(column, row_start, nx, ny, nz, y_planes, spacing[0], squared)
     return VesselVoxels(linear, np.sqrt(squared, out=squared))
