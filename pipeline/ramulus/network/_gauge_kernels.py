@@ -503,30 +503,3 @@ def average_along(segment, s, radius, se, slope, good, diameters, n_segments):
         begin = end
     return mean, error, common
 
-
-@numba.njit(cache=True, nogil=True)
-def to_points(arc, offsets, segment, s, value):
-    """Linear interpolation of station values at every point, constant beyond the outer stations."""
-    out = np.full(len(arc), np.nan)
-    k = 0
-    n = len(s)
-    for i in range(len(offsets) - 1):
-        while k < n and segment[k] < i:
-            k += 1
-        begin = k
-        while k < n and segment[k] == i:
-            k += 1
-        if k == begin:
-            continue
-        j = begin
-        for p in range(offsets[i], offsets[i + 1]):
-            while j + 1 < k and s[j + 1] < arc[p]:
-                j += 1
-            if arc[p] <= s[begin]:
-                out[p] = value[begin]
-            elif j + 1 >= k:
-                out[p] = value[k - 1]
-            else:
-                f = (arc[p] - s[j]) / (s[j + 1] - s[j])
-                out[p] = value[j] * (1 - f) + value[j + 1] * f
-    return out

@@ -13,6 +13,7 @@ from .._settings import Settings, setting
 from ..errors import UnusableInputError
 from . import _gauge_kernels as kernels
 from .graph import RADIUS_METHODS, CentrelineGraph
+from .recentre import recentre
 from .zones import zone_bounds_um
 
 __all__ = ["Blur", "GaugeSettings", "Gauged", "blurred_disc_table", "gauge"]
@@ -275,26 +276,32 @@ def _carried(graph, stations, fit, blur, sampler, settings):  # noqa: ANN001, AN
         settings.smooth_diameters, graph.n_segments,
     )  # fmt: skip
     common = np.abs(common) * blur.log_sd
-    low, high = zone_bounds_um(graph, graph.point_radius_map_um)
+    usable = np.isfinite(radius)
+    centre = fit.frames[:, 0].copy()
+    if settings.recentre:
+        moved = np.einsum("kc,kca->ka", fit.shift, fit.frames[:, 1:])
+        near = good & (np.linalg.norm(moved, axis=1) < np.maximum(0.7 * fit.radius, 1.5 * sampler.step_um))
+        centre[near] += moved[near]
+    graph, point = recentre(
+        graph, segment=stations["segment"][usable], s_um=stations["s"][usable], centre_um=centre[usable],
+        values=np.stack([radius, se, common], axis=1)[usable], step_um=0.5 * sampler.step_um,
+        slack_um=0.15 * sampler.step_um,
+    )  # fmt: skip
+    measured = np.isfinite(point[:, 0])
+    low, high = zone_bounds_um(graph, np.where(measured, point[:, 0], graph.point_radius_map_um))
     arc = graph.arc_um()
     per = graph.points_per_segment
-    zone = (arc < np.repeat(low, per)) | (arc > np.repeat(high, per))
-    usable = np.isfinite(radius)
-    point = {
-        name: kernels.to_points(
-            arc, graph.point_offsets, stations["segment"][usable], stations["s"][usable], values[usable]
-        )
-        for name, values in (("r", radius), ("se", se), ("common", common))
-    }
-    measured = np.isfinite(point["r"])
-    fallback = graph.point_radius_map_um
+    # A segment that lies in zones altogether keeps what its stations say.
+    whole = np.repeat(high <= low, per)
+    zone = ((arc < np.repeat(low, per)) | (arc > np.repeat(high, per))) & ~whole
     method = np.where(measured, np.where(zone, _METHOD["continued"], _METHOD["fit"]), _METHOD["distance"])
     if sampler.known_levels:
         method = np.where(method == _METHOD["fit"], _METHOD["volume"], method)
+    half_voxel = 0.5 * sampler.step_um
     new = graph.replace(
-        point_radius_um=np.where(measured, point["r"], fallback),
-        point_radius_se_um=np.where(measured, point["se"], 0.5 * sampler.step_um),
-        point_radius_common_um=np.where(measured, point["common"], 0.25 * sampler.step_um),
+        point_radius_um=np.where(measured, point[:, 0], np.maximum(graph.point_radius_map_um, half_voxel)),
+        point_radius_se_um=np.where(measured, point[:, 1], half_voxel),
+        point_radius_common_um=np.where(measured, point[:, 2], 0.5 * half_voxel),
         point_method=method.astype(np.int8),
         point_in_zone=zone,
     )
