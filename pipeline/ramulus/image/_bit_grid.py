@@ -41,12 +41,14 @@ class BitGrid:
         """Return the (n, 3) indices z, y, x of addresses."""
         row, x = np.divmod(address, self.row_words * 32)
         z, y = np.divmod(row, self.shape[1] + 2)
-        return np.stack([z - 1, y - 1, x - 1], axis=1)
+        index: np.ndarray = np.stack([z - 1, y - 1, x - 1], axis=1)
+        return index
 
     def linear(self, index: np.ndarray) -> np.ndarray:
         """Return the places in the flattened volume of (n, 3) indices."""
         _, ny, nx = self.shape
-        return (index[:, 0] * ny + index[:, 1]) * nx + index[:, 2]
+        linear: np.ndarray = (index[:, 0] * ny + index[:, 1]) * nx + index[:, 2]
+        return linear
 
     def words(self, address: np.ndarray) -> np.ndarray:
         """Return a volume of bits, as 32-bit words, in which these voxels are set."""

@@ -9,28 +9,34 @@ in shifts and masks, which measured as fast as a look-up in the 8 MiB table of a
 no table at start-up.
 """
 
+from collections.abc import Sequence
+
 import numba
 import numpy as np
 
 __all__ = ["CENTRE", "FACES", "NEAREST_18", "is_simple", "simple_table"]
 
 
-def _bits(wanted: object) -> int:
-    """Return the number whose bits are set where `wanted(dz, dy, dx)` holds, offsets -1 to 1."""
-    cells = ((z, y, x) for z in (-1, 0, 1) for y in (-1, 0, 1) for x in (-1, 0, 1))
-    return sum(1 << bit for bit, cell in enumerate(cells) if wanted(*cell))  # type: ignore[operator]
+_CELLS = [(z, y, x) for z in (-1, 0, 1) for y in (-1, 0, 1) for x in (-1, 0, 1)]
+
+
+def _bits(wanted: Sequence[bool]) -> int:
+    """Return the number whose bits are set where `wanted` holds, cell by cell."""
+    return sum(1 << bit for bit, holds in enumerate(wanted) if holds)
 
 
 CENTRE = 1 << 13
 ALL_27 = (1 << 27) - 1
-FACES = _bits(lambda z, y, x: abs(z) + abs(y) + abs(x) == 1)
-NEAREST_18 = _bits(lambda z, y, x: abs(z) + abs(y) + abs(x) in (1, 2))
-_NOT_FIRST_X, _NOT_LAST_X = _bits(lambda z, y, x: x >= 0), _bits(lambda z, y, x: x <= 0)
-_NOT_FIRST_Y, _NOT_LAST_Y = _bits(lambda z, y, x: y >= 0), _bits(lambda z, y, x: y <= 0)
+FACES = _bits([abs(z) + abs(y) + abs(x) == 1 for z, y, x in _CELLS])
+NEAREST_18 = _bits([abs(z) + abs(y) + abs(x) in (1, 2) for z, y, x in _CELLS])
+_NOT_FIRST_X = _bits([x >= 0 for _, _, x in _CELLS])
+_NOT_LAST_X = _bits([x <= 0 for _, _, x in _CELLS])
+_NOT_FIRST_Y = _bits([y >= 0 for _, y, _ in _CELLS])
+_NOT_LAST_Y = _bits([y <= 0 for _, y, _ in _CELLS])
 
 
 @numba.njit(cache=True, nogil=True)
-def is_simple(code):
+def is_simple(code: int) -> bool:
     """Tell whether the voxel with this 27-bit neighbourhood is simple (its own bit is ignored)."""
     touching = ~code & FACES
     if touching == 0:
@@ -42,8 +48,8 @@ def is_simple(code):
 
 
 @numba.njit(cache=True, nogil=True)
-def _is_one_26_set(cells):
-    """Flood from the lowest cell through corners, edges and faces; did it reach every cell?"""
+def _is_one_26_set(cells: int) -> bool:
+    """Flood from the lowest cell to 26-neighbours; tell whether it reaches every cell."""
     reached = cells & -cells
     while True:
         grown = reached | ((reached << 1) & _NOT_FIRST_X) | ((reached >> 1) & _NOT_LAST_X)
@@ -57,8 +63,8 @@ def _is_one_26_set(cells):
 
 
 @numba.njit(cache=True, nogil=True)
-def _touches_one_6_set(cells, touching):
-    """Flood from one touching cell through faces; did it reach all cells that touch the voxel?"""
+def _touches_one_6_set(cells: int, touching: int) -> bool:
+    """Flood from one touching cell to 6-neighbours; tell whether it reaches all that touch."""
     reached = touching & -touching
     while True:
         grown = reached | ((reached << 1) & _NOT_FIRST_X) | ((reached >> 1) & _NOT_LAST_X)
@@ -72,7 +78,7 @@ def _touches_one_6_set(cells, touching):
 
 
 @numba.njit(cache=True, nogil=True)
-def simple_table(first, stop):
+def simple_table(first: int, stop: int) -> np.ndarray:
     """Return whether each 26-bit neighbourhood in first..stop-1 is simple (the centre left out)."""
     simple = np.zeros(stop - first, dtype=np.bool_)
     low = CENTRE - 1

@@ -12,7 +12,6 @@ import numpy as np
 
 from ._simple_points import CENTRE, is_simple
 
-
 _HALF = 24
 _LOW = (1 << _HALF) - 1
 _ROUNDS = (0x9E3779B1, 0x85EBCA77, 0xC2B2AE3D)
