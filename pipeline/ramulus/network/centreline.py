@@ -86,7 +86,7 @@ def meeting_points(graph: CentrelineGraph, *, radius_um: np.ndarray) -> np.ndarr
         along = arc if side == 0 else np.repeat(length, per) - arc
         first = np.repeat(reach, per)
         span = np.maximum(first, 3.0 * finest)
-        chosen = (along >= first) & (along <= first + span)
+        chosen = (along >= first) & (along <= first + 2.0 * span)
         ends = graph.segment_nodes[:, side]
         near = graph.point_offsets[:-1] if side == 0 else graph.point_offsets[1:] - 1
         np.maximum.at(widest, ends, radius[near])
@@ -116,8 +116,8 @@ def meeting_points(graph: CentrelineGraph, *, radius_um: np.ndarray) -> np.ndarr
     if not len(solve):
         return node
     # A weak pull to the old place keeps nearly parallel axes harmless.
-    system = normal[solve] + 0.05 * np.eye(3)
-    target = right[solve] + 0.05 * node[solve]
+    system = normal[solve] + 0.01 * np.eye(3)
+    target = right[solve] + 0.01 * node[solve]
     moved = np.linalg.solve(system, target[:, :, None])[:, :, 0]
     shift = moved - node[solve]
     size = np.linalg.norm(shift, axis=1)

@@ -14,6 +14,7 @@ from ..errors import UnusableInputError
 from . import _gauge_kernels as kernels
 from .graph import RADIUS_METHODS, CentrelineGraph
 from .recentre import recentre
+from .tips import tip_positions
 from .zones import zone_bounds_um
 
 __all__ = ["Blur", "GaugeSettings", "Gauged", "blurred_disc_table", "gauge"]
@@ -282,9 +283,15 @@ def _carried(graph, stations, fit, blur, sampler, settings):  # noqa: ANN001, AN
         moved = np.einsum("kc,kca->ka", fit.shift, fit.frames[:, 1:])
         near = good & (np.linalg.norm(moved, axis=1) < np.maximum(0.7 * fit.radius, 1.5 * sampler.step_um))
         centre[near] += moved[near]
+    tip = tip_positions(
+        graph, sampler.volume, spacing_um=sampler.spacing_um, origin_um=tuple(sampler.origin),
+        segment=stations["segment"][usable], s_um=stations["s"][usable], centre_um=centre[usable],
+        radius_um=radius[usable], contrast=fit.contrast[usable], background=fit.background[usable],
+        sigma_um=blur.sigma_xy_um,
+    )  # fmt: skip
     graph, point = recentre(
         graph, segment=stations["segment"][usable], s_um=stations["s"][usable], centre_um=centre[usable],
-        values=np.stack([radius, se, common], axis=1)[usable], step_um=0.5 * sampler.step_um,
+        values=np.stack([radius, se, common], axis=1)[usable], tip_um=tip, step_um=0.5 * sampler.step_um,
         slack_um=0.15 * sampler.step_um,
     )  # fmt: skip
     measured = np.isfinite(point[:, 0])

@@ -17,7 +17,7 @@ __all__ = ["recentre"]
 
 def recentre(
     graph: CentrelineGraph, *, segment: np.ndarray, s_um: np.ndarray, centre_um: np.ndarray,
-    values: np.ndarray, step_um: float, slack_um: float,
+    values: np.ndarray, tip_um: np.ndarray, step_um: float, slack_um: float,
 ) -> tuple[CentrelineGraph, np.ndarray]:  # fmt: skip
     """Return the graph on lines through station centres, and the stations' values at its points.
 
@@ -31,6 +31,8 @@ def recentre(
         Fitted centre of each.
     values : (k, c) array
         What is carried to the points by interpolation, constant beyond the outer stations.
+    tip_um : (n, 3) array
+        Places of blind ends as read in the image, NaN where unknown.
     step_um : float
         Distance of the points along the new lines.
     slack_um : float
@@ -48,6 +50,7 @@ def recentre(
     keep_from = np.where(trim[:, 0], np.minimum(low, 0.4 * length), 0.0)
     keep_to = np.where(trim[:, 1], np.maximum(high, 0.6 * length), length)
     node = _ends_moved(graph, segment, s_um, centre_um, keep_from, keep_to)
+    node = np.where(np.isfinite(tip_um), tip_um, node)
     for final in (False, True):
         points, carried, counts = kernels.lines(
             np.ascontiguousarray(graph.point_position_um), graph.point_radius_map_um.copy(), graph.arc_um(),
