@@ -93,7 +93,7 @@ def score(
         ends=int((measured.node_degree() == 1).sum()),
         true_ends=int((truth.node_degree() == 1).sum()),
         radius_errors=_radius_errors(measured, truth, coarse, fine),
-        hindrance_ratio=float("nan") if hindrance is None else hindrance(measured) / hindrance(truth),
+        hindrance_ratio=hindrance(measured) / hindrance(truth) if hindrance else float("nan"),
         unmatched_true_um=junctions[3], unmatched_measured_um=junctions[4],
     )  # fmt: skip
 
