@@ -118,6 +118,7 @@ def test_foreign_separators_are_named(folder, name, separator):
         ("sample,stack,stack\nm1,a.tif,a.tif\n", "column 'stack' stands 2 times"),
         ("sample,stack,\nm1,a.tif,x\n", "a column has no name"),
         ("sample,stack,status\nm1,a.tif,x\n", "column 'status' is a column of the result"),
+        ("sample,stack,loops\nm1,a.tif,x\n", "column 'loops' is a column of the result"),
         ("sample,stack,=x\nm1,a.tif,x\n", "column '=x' begins like a formula"),
         ('sample,stack\n"m1,a.tif\n', "line 2: unexpected end of data"),
         ("sample,stack\nm\x001,a.tif\n", "NUL"),

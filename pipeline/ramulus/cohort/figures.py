@@ -60,7 +60,6 @@ FIGURES: dict[str, Figure] = {
         Figure("ends", "Blind ends"),
         Figure("loops", "Loops"),
         Figure("components", "Components"),
-        Figure("dominant_segments", "Segments that carry most of the resistance"),
         Figure("effective_segments", "Effective number of resisting segments"),
         Figure("smallest_resolved_radius_um", "Smallest resolved radius", "µm", "log", "quality"),
         Figure("radius_correction", "Correction of the radii", role="quality"),

@@ -11,12 +11,15 @@ from pathlib import Path
 from unicodedata import normalize
 
 from ..errors import UnusableInputError
+from .figures import FIGURES
 
 __all__ = ["Manifest", "ManifestRow", "read_manifest"]
 
 COLUMNS = ("sample", "stack", "subject", "group", "batch", "config", "edits")
 _FILES = ("stack", "config", "edits")
-_RESERVED = ("status", "flags", "reason", "ordering")
+_RESERVED = {"status", "flags", "rejected_by", "reason"} | {
+    f"{name}{end}" for name in FIGURES for end in ("", "_low", "_high")
+}
 _MOST_BYTES = 16 * 1024**2
 _MOST_SHOWN = 20
 _SAMPLE = re.compile(r"\w[\w .+@=,()-]{0,99}")
