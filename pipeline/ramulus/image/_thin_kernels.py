@@ -49,6 +49,15 @@ def addresses_of_keys(keys, ny, nx, row_bits):
 
 
 @numba.njit(cache=True, nogil=True)
+def levels_of_keys(keys):
+    """Read the voxels' distance levels back from their keys."""
+    levels = np.empty(len(keys), dtype=np.int16)
+    for i in range(len(keys)):
+        levels[i] = keys[i] >> (2 * _HALF)
+    return levels
+
+
+@numba.njit(cache=True, nogil=True)
 def addresses_of(linear, ny, nx, row_bits):
     """Bit addresses of voxels given by their place in the flattened volume."""
     addresses = np.empty(len(linear), dtype=np.int64)
@@ -87,36 +96,71 @@ def neighbourhood(words, address, row_words, plane_words):
 
 
 @numba.njit(cache=True, nogil=True)
-def erode(words, addresses, anchored, keep_ends, row_words, plane_words):
-    """Remove simple voxels in the order given, pass after pass, until none is left; clear `words`.
+def erode(words, addresses, levels, held, keep_ends, row_words, plane_words):
+    """Remove simple voxels level by level, pass after pass, until none is left; clear their bits.
 
-    `addresses` and `anchored` are compacted in place; returns how many voxels stay. With
-    `keep_ends` a voxel with one neighbour stays. Anchored voxels stay.
+    Within a level a round removes, in the order given, voxels that were simple when the round began
+    and still are: a plateau of equal distance is worn down from its rim, not eaten into at random.
+    With `keep_ends` a voxel with one neighbour stays; held voxels stay. The three arrays are
+    compacted in place; returns how many voxels are left.
     """
     count = len(addresses)
+    ready = np.empty(count, dtype=np.bool_)
     changed = True
     while changed:
-        changed = False
         kept = 0
-        for i in range(count):
-            address = addresses[i]
-            stays = anchored[i]
-            if not stays:
-                code = neighbourhood(words, address, row_words, plane_words)
-                others = code & ~CENTRE
-                stays = keep_ends and others & (others - 1) == 0
-                stays = stays or not is_simple(code)
-            if stays:
-                addresses[kept] = address
-                anchored[kept] = anchored[i]
+        first = 0
+        while first < count:
+            stop = first
+            while stop < count and levels[stop] == levels[first]:
+                stop += 1
+            begin = kept
+            for i in range(first, stop):
+                addresses[kept] = addresses[i]
+                levels[kept] = levels[i]
+                held[kept] = held[i]
                 kept += 1
-            else:
+            kept = _wear_down(
+                words, addresses, held, ready, begin, kept, keep_ends, row_words, plane_words
+            )
+            first = stop
+        changed = kept < count
+        count = kept
+    return count
+
+
+@numba.njit(cache=True, nogil=True)
+def _wear_down(words, addresses, held, ready, begin, stop, keep_ends, row_words, plane_words):
+    """Remove what can be removed of one level, whose voxels stand at begin:stop; return its end."""
+    while True:
+        for i in range(begin, stop):
+            ready[i] = not held[i] and _is_removable(
+                neighbourhood(words, addresses[i], row_words, plane_words), keep_ends
+            )
+        kept = begin
+        for i in range(begin, stop):
+            address = addresses[i]
+            if ready[i] and _is_removable(
+                neighbourhood(words, address, row_words, plane_words), keep_ends
+            ):
                 words[address >> 5] = np.uint32(
                     np.int64(words[address >> 5]) & ~(1 << (address & 31))
                 )
-                changed = True
-        count = kept
-    return count
+            else:
+                addresses[kept] = address
+                held[kept] = held[i]
+                kept += 1
+        if kept == stop:
+            return kept
+        stop = kept
+
+
+@numba.njit(cache=True, nogil=True)
+def _is_removable(code, keep_ends):
+    others = code & ~CENTRE
+    if keep_ends and others & (others - 1) == 0:
+        return False
+    return is_simple(code)
 
 
 @numba.njit(cache=True, nogil=True)
@@ -217,39 +261,117 @@ def label_sets(start, neighbour, member):
 
 
 @numba.njit(cache=True, nogil=True)
-def accept_tips(tips, is_cap, distance, before, radius, marked, protrusion):
+def accept_tips(
+    tips, is_cap, distance, before, start, neighbour, position_um, radius, marked, inside,
+    spacing_um, protrusion,
+):  # fmt: skip
     """Tell which candidate tips stand out from what is marked, in the order given.
 
-    The path from a tip is followed back to the first marked voxel. A free tip is accepted when the
-    lumen's end lies further outside the inscribed ball there than `protrusion` times the branch's
-    own radius outside that ball, or times half the ball's where that is more; a cap is accepted
-    when it lies outside the ball at all. The path of an accepted tip is marked.
+    The path from a tip is followed back to the first marked voxel. A cap is accepted when it lies
+    outside the inscribed ball there. A free tip is accepted when the lumen's end lies further
+    outside the parent's wall than `protrusion` times the ball's radius, or times the branch's own
+    diameter where that is more. The wall is the ball's, or what is found in the tip's direction
+    from the marked line a little before and after. The path of an accepted tip is marked.
     """
     accepted = np.zeros(len(tips), dtype=np.bool_)
+    queue = np.empty(_NEARBY, dtype=np.int64)
+    walls = np.empty(_NEARBY, dtype=np.float64)
     for k in range(len(tips)):
-        base = tips[k]
+        tip = tips[k]
+        base = tip
         while base >= 0 and not marked[base]:
             base = before[base]
-        if base < 0 or base == tips[k]:
+        if base < 0 or base == tip:
             continue
         ball = radius[base]
-        wide = 0.5 * ball
-        i = tips[k]
-        while i != base:
-            if distance[i] - distance[base] > ball:
-                wide = max(wide, radius[i])
-            i = before[i]
-        run = distance[tips[k]] - distance[base]
+        run = distance[tip] - distance[base]
         if is_cap[k]:
             accepted[k] = run > ball
-        else:
-            accepted[k] = run + radius[tips[k]] - ball > protrusion * wide
+        elif run + radius[tip] - ball > protrusion * ball:
+            own = 0.0
+            i = tip
+            while i != base:
+                if distance[i] - distance[base] > ball:
+                    own = max(own, radius[i])
+                i = before[i]
+            needed = protrusion * max(ball, 2.0 * own)
+            if run + radius[tip] - ball > needed:
+                wall = wall_beside(
+                    base, position_um[tip], 2.0 * own, start, neighbour, position_um, marked,
+                    inside, spacing_um, queue, walls,
+                )  # fmt: skip
+                accepted[k] = run + radius[tip] - max(ball, wall) > needed
         if accepted[k]:
-            i = tips[k]
+            i = tip
             while i != base:
                 marked[i] = True
                 i = before[i]
     return accepted
+
+
+_NEARBY = 64
+
+
+@numba.njit(cache=True, nogil=True)
+def wall_beside(
+    base, tip_um, apart, start, neighbour, position_um, marked, inside, spacing_um, queue, walls
+):
+    """Median distance from the marked line to the wall in the direction of a tip, beside its base.
+
+    It is taken from marked voxels between one and two times `apart` from the base.
+    """
+    queue[0] = base
+    length, found, at = 1, 0, 0
+    while at < length:
+        i = queue[at]
+        at += 1
+        away = _distance(position_um, i, base)
+        if away > apart and found < _NEARBY:
+            walls[found] = _ray(inside, position_um[i], tip_um - position_um[base], spacing_um)
+            found += 1
+        if away > 2.0 * apart:
+            continue
+        for k in range(start[i], start[i + 1]):
+            j = neighbour[k]
+            known = not marked[j]
+            for m in range(length):
+                known = known or queue[m] == j
+            if not known and length < _NEARBY:
+                queue[length] = j
+                length += 1
+    if found < 2:
+        return 0.0
+    walls[:found].sort()
+    return walls[(found - 1) // 2]
+
+
+@numba.njit(cache=True, nogil=True)
+def _ray(inside, from_um, towards_um, spacing_um):
+    """Distance from a place to the lumen's wall, no further than the length of `towards_um`."""
+    length = np.sqrt((towards_um**2).sum())
+    stride = 0.5 * spacing_um.min()
+    travelled = 0.0
+    while travelled < length:
+        z = int(np.rint((from_um[0] + travelled / length * towards_um[0]) / spacing_um[0]))
+        y = int(np.rint((from_um[1] + travelled / length * towards_um[1]) / spacing_um[1]))
+        x = int(np.rint((from_um[2] + travelled / length * towards_um[2]) / spacing_um[2]))
+        if not (0 <= z < inside.shape[0] and 0 <= y < inside.shape[1]):
+            break
+        if not (0 <= x < inside.shape[2] and inside[z, y, x]):
+            break
+        travelled += stride
+    return travelled
+
+
+@numba.njit(cache=True, nogil=True)
+def _distance(position_um, i, j):
+    square = 0.0
+    for axis in range(3):
+        square += (position_um[i, axis] - position_um[j, axis]) ** 2
+    return np.sqrt(square)
+
+
+_STEEP = 0.3
 
 
 @numba.njit(cache=True, nogil=True)
@@ -268,8 +390,8 @@ def blunt_ends(tips, start, neighbour, position_um, radius, reach):
         run, best_run, best, widest = 0.0, 0.0, -np.inf, 0.0
         while i >= 0:
             widest = max(widest, radius[i])
-            if radius[i] - 0.5 * run > best:
-                best, best_run = radius[i] - 0.5 * run, run
+            if radius[i] - _STEEP * run > best:
+                best, best_run = radius[i] - _STEEP * run, run
                 end[k] = i
                 inner[k] = -1
             elif inner[k] < 0 and run - best_run >= 2.0 * radius[end[k]]:

@@ -14,6 +14,7 @@ from ._thin_kernels import (
     erode,
     geodesic,
     label_sets,
+    levels_of_keys,
     order_keys,
     run_out,
     set_bits,
@@ -88,9 +89,10 @@ def thin(mask: Mask, *, settings: ThinSettings | None = None) -> Skeleton:
     caps = _cut_caps(field, mask.inside)
     keys = field.keys(field.linear, field.distance_um)
     first = field.eroded(words, keys, field.keys_of(caps), keep_ends=True)
+    caps = _caps_across(field, first, caps)
     core = field.lines_eroded(words, first, np.zeros(len(first), dtype=bool), keep_ends=False)
     set_bits(words, first)
-    ends = _ends(field, first, caps, core, settings.tip_protrusion)
+    ends = _ends(field, mask.inside, first, caps, core, settings.tip_protrusion)
     lines = field.lines_eroded(words, first, ends, keep_ends=False)
     lines = _run_out(field, mask.inside, words, lines, caps)
     return Skeleton(
@@ -117,10 +119,10 @@ def without_corners(skeleton: Skeleton) -> Skeleton:
 
     Examples
     --------
-    >>> corner = np.array([[1, 1, 1], [1, 1, 2], [1, 2, 2], [1, 3, 2]])
-    >>> bent = Skeleton(corner, np.ones(4, np.float32), (3, 5, 5), (1.0, 1.0, 1.0))
+    >>> corner = np.array([[1, 1, 1], [1, 1, 2], [1, 1, 3], [1, 2, 3], [1, 3, 3]])
+    >>> bent = Skeleton(corner, np.ones(5, np.float32), (3, 5, 5), (1.0, 1.0, 1.0))
     >>> without_corners(bent).voxels.tolist()
-    [[1, 1, 1], [1, 2, 2], [1, 3, 2]]
+    [[1, 1, 1], [1, 1, 2], [1, 2, 3], [1, 3, 3]]
     """
     grid = BitGrid(skeleton.shape)
     linear = grid.linear(np.asarray(skeleton.voxels, dtype=np.int64))
@@ -181,8 +183,9 @@ class _Field:
         held = np.zeros(len(keys), dtype=bool)
         held[np.searchsorted(keys, held_keys)] = True
         _, ny, nx = self.grid.shape
-        address = addresses_of_keys(keys, ny, nx, self.grid.row_words * 32)
-        kept = erode(words, address, held, keep_ends, self.grid.row_words, self.grid.plane_words)
+        row_words, plane_words = self.grid.row_words, self.grid.plane_words
+        address = addresses_of_keys(keys, ny, nx, row_words * 32)
+        kept = erode(words, address, levels_of_keys(keys), held, keep_ends, row_words, plane_words)
         return np.sort(address[:kept])
 
     def lines_eroded(
@@ -222,6 +225,18 @@ def _cut_caps(field: _Field, inside: np.ndarray) -> np.ndarray:
     return address[order[first]][across]
 
 
+def _caps_across(field: _Field, lines: np.ndarray, caps: np.ndarray) -> np.ndarray:
+    """Return the caps that end a line at nearly its full radius.
+
+    A lumen's rounded side or tip that only touches the face narrows towards it instead.
+    """
+    start, neighbour = field.grid.neighbours(lines)
+    place = np.searchsorted(lines, caps)
+    position_um, radius_um = field.position_um(lines), field.radius_um(lines)
+    end, _ = blunt_ends(place, start, neighbour, position_um, radius_um, _END_REACH)
+    return caps[end == place]
+
+
 def _on_faces(inside: np.ndarray) -> np.ndarray:
     """Return the (n, 3) indices of vessel voxels on the faces of axes longer than two voxels."""
     faces = [
@@ -234,7 +249,12 @@ def _on_faces(inside: np.ndarray) -> np.ndarray:
 
 
 def _ends(
-    field: _Field, lines: np.ndarray, caps: np.ndarray, core: np.ndarray, protrusion: float
+    field: _Field,
+    inside: np.ndarray,
+    lines: np.ndarray,
+    caps: np.ndarray,
+    core: np.ndarray,
+    protrusion: float,
 ) -> np.ndarray:
     """Return which voxels of the first lines are vessel ends.
 
@@ -253,7 +273,10 @@ def _ends(
     distance_um, before, source = geodesic(start, neighbour, position_um, np.flatnonzero(marked))
     tips = np.flatnonzero(((np.diff(start) == 1) | is_cap) & ~marked)
     tips = tips[np.lexsort((tips, -distance_um[tips], ~is_cap[tips]))]
-    accepted = accept_tips(tips, is_cap[tips], distance_um, before, radius_um, marked, protrusion)
+    accepted = accept_tips(
+        tips, is_cap[tips], distance_um, before, start, neighbour, position_um, radius_um, marked,
+        inside, np.array(field.spacing_um), protrusion,
+    )  # fmt: skip
     held = np.zeros(len(lines), dtype=bool)
     held[tips[accepted]] = True
     held[np.intersect1d(far, source[tips[accepted]])] = True
