@@ -178,7 +178,8 @@ def _attempt(measure_sample: MeasureSample, row: ManifestRow) -> Outcome:
 
 
 def _one_line(words: str) -> str:
-    return " ".join(words.split())[:500] or "no reason given"
+    plain = words.encode("utf-8", "backslashreplace").decode()  # a file's name may be no Unicode
+    return " ".join(plain.split())[:500] or "no reason given"
 
 
 @contextmanager
