@@ -1,7 +1,7 @@
 """The phantoms on which accuracy is judged: named conditions, and seeds that were set apart.
 
-The edge of a voxel along y and x is 1 um, along z `ratio` um; radii and clearances are in um, so that
-a radius of 2 is two voxels of the finest axis. At 5:1 the thinnest vessels have 3.4 um: two edges of
+The edge of a voxel along y and x is 1 um, along z `ratio` um; radii and clearances are in um, so
+that a radius of 2 is two voxels of the finest axis. At 5:1 the thinnest vessels have 3.4 um: two edges of
 a cube as large as the voxel (their diameter is 1.4 slices).
 
 `TUNING` is for choosing methods and constants. `HELD_OUT` is for judging alone: no phantom of it may
@@ -45,7 +45,8 @@ class Condition:
     @property
     def _tree(self) -> TreeSettings:
         return TreeSettings(
-            exponent=self.exponent, root_radius_um=(2.5 if self.ratio == 5 else 3.2) * self.min_radius_um,
+            exponent=self.exponent,
+            root_radius_um=(2.5 if self.ratio == 5 else 3.2) * self.min_radius_um,
             min_radius_um=self.min_radius_um, clearance_um=_CLEARANCE_UM[self.ratio],
             length_to_radius=6.0 if self.min_radius_um >= 2 else 9.0, asymmetry=(0.5, 1.0),
             min_segments=9 if self.ratio == 5 else 17,
