@@ -8,7 +8,7 @@ from statsmodels.stats.anova import anova_lm
 from statsmodels.stats.power import TTestIndPower
 
 from ramulus._cohort_settings import CohortSettings
-from ramulus.cohort.diagnostics import batch_effects, outliers, plan
+from ramulus.cohort.diagnostics import batch_effects, outliers, plan, quality_links
 from ramulus.cohort.figures import FIGURES
 
 SETTINGS = CohortSettings()
@@ -91,3 +91,26 @@ def test_plan_shows_what_subjects_and_stacks_would_give():
 def test_plan_needs_repeats():
     table = table_of([1.0, 2.0, 3.0], group="a")
     assert plan(table, FIGURES["junction_exponent"], SETTINGS).empty
+
+
+def test_a_figure_that_follows_the_resolution_is_shown():
+    random = np.random.default_rng(4)
+    group = np.repeat(["a", "b"], 8)
+    radius = np.exp(random.normal(0, 0.3, 16))
+    table = table_of(2 * np.log(radius) + 5 * (group == "b"), group=group)
+    table = table.assign(smallest_resolved_radius_um=radius, spacing_z_um=1.0, shape_z=100)
+    settings = CohortSettings(primary_figures=("junction_exponent",))
+    links = quality_links(table, settings)
+    # Twice the logarithm: the same order within the groups, whose means are taken out.
+    assert links.to_numpy().tolist()[0][:3] == [
+        "junction_exponent", "smallest_resolved_radius_um", 16
+    ]  # fmt: skip
+    assert links["rho"].iloc[0] == pytest.approx(1.0)
+    assert len(links) == 1  # the spacing and the depth do not vary
+
+
+def test_links_need_a_primary_figure_and_some_subjects():
+    table = table_of([1.0, 2.0, 3.0], group="a").assign(smallest_resolved_radius_um=[1, 2, 3])
+    assert quality_links(table, SETTINGS).empty
+    primary = CohortSettings(primary_figures=("junction_exponent",))
+    assert quality_links(table.assign(shape_z=1, spacing_z_um=1.0), primary).empty

@@ -9,12 +9,14 @@ import pandas as pd
 from .._cohort_settings import CohortSettings
 from ..quantities import Undefined
 from .difference import smallest_detectable_g
-from .figures import Figure
+from .figures import FIGURES, Figure
 from .second_opinions import spread_of_stacks
 from .statistics import adjust
-from .values import Values, by_subject, figures_of, stack_values
+from .values import Values, by_subject, figures_of, numbers, stack_values
 
-__all__ = ["batch_effects", "outliers", "plan"]
+__all__ = ["batch_effects", "outliers", "plan", "quality_links"]
+
+_SUSPECTS = ("smallest_resolved_radius_um", "spacing_z_um", "spacing_x_um", "depth_um")
 
 
 def outliers(table: pd.DataFrame, settings: CohortSettings) -> pd.DataFrame:
@@ -103,7 +105,8 @@ def _batch_effect(values: Values) -> Iterator[dict[str, Any]]:
     gained = int(np.linalg.matrix_rank(whole)) - group.shape[1]
     df = len(values.value) - group.shape[1] - gained
     plain, fitted = (float(_misfit(values.value, design)) for design in (group, whole))
-    if gained < 1 or df < 1 or fitted <= 1e-12 * plain:
+    tiny = 1e-20 * float(values.value @ values.value)  # nothing but rounding
+    if gained < 1 or df < 1 or plain <= tiny or fitted <= 1e-12 * plain:
         return
     f = (plain - fitted) / gained / (fitted / df)
     p = float(f_law.sf(f, gained, df))
@@ -148,3 +151,56 @@ def plan(table: pd.DataFrame, figure: Figure, settings: CohortSettings) -> pd.Da
             sd = spread.of_subject_mean(n_stacks) ** 0.5
             rows.append((n_subjects, n_stacks, stacks.shown(g * sd)))
     return pd.DataFrame(rows, columns=columns)
+
+
+def quality_links(table: pd.DataFrame, settings: CohortSettings) -> pd.DataFrame:
+    """Correlate the primary figures with what should not matter: resolution, spacing, depth.
+
+    Spearman's rank correlation of one value per subject, the groups' means taken out of both.
+
+    Parameters
+    ----------
+    table : DataFrame
+        The cohort's table.
+    settings : CohortSettings
+        The primary figures.
+
+    Returns
+    -------
+    DataFrame
+        `figure, against, n_subjects, rho, p`; empty where nothing varies.
+    """
+    depth_um = numbers(table, "shape_z") * numbers(table, "spacing_z_um")
+    table = table.assign(depth_um=depth_um)
+    rows = [
+        {"figure": name, "against": other} | found
+        for name in settings.primary_figures
+        for other in _SUSPECTS
+        for found in _link(table, FIGURES[name], Figure(other, other, scale="log"), settings)
+    ]
+    return pd.DataFrame(rows, columns=["figure", "against", "n_subjects", "rho", "p"])
+
+
+def _link(
+    table: pd.DataFrame, figure: Figure, other: Figure, settings: CohortSettings
+) -> Iterator[dict[str, Any]]:
+    from scipy.stats import spearmanr  # noqa: PLC0415 - scipy.stats costs a second at start-up
+
+    first, second = (by_subject(stack_values(table, f, settings)) for f in (figure, other))
+    shared = sorted(set(first.subject) & set(second.subject))
+    left, right = (_within_groups(values, shared) for values in (first, second))
+    if len(shared) < 5 or np.ptp(left) <= 1e-12 or np.ptp(right) <= 1e-12:
+        return
+    found = spearmanr(left, right)
+    yield {"n_subjects": len(shared), "rho": float(found.statistic), "p": float(found.pvalue)}
+
+
+def _within_groups(values: Values, subjects: list[str]) -> np.ndarray:
+    """Return the subjects' values less their group's mean, in the order given."""
+    of_subject = {name: k for k, name in enumerate(values.subject)}
+    index = [of_subject[name] for name in subjects]
+    value, group = values.value[index], values.group[index]
+    if not len(value):
+        return value
+    centred: np.ndarray = value - np.array([value[group == name].mean() for name in group])
+    return centred

@@ -8,6 +8,7 @@ import pandas as pd
 
 from ..tree.diameter_orders import OrderSettings, diameter_orders
 from ..tree.elements import elements, order_table
+from .values import numbers
 
 __all__ = ["PooledOrders", "pooled_orders"]
 
@@ -85,9 +86,9 @@ class _Tree:
 
 def _tree(table: pd.DataFrame) -> _Tree:
     """Read a tree from segments; `node_a` is upstream: a parent ends where its daughters begin."""
-    radius = _numbers(table, "radius_um")
-    kept = np.isfinite(_numbers(table, "order")) & (radius > 0)
-    start, end = (_numbers(table, name)[kept] for name in ("node_a", "node_b"))
+    radius = numbers(table, "radius_um")
+    kept = np.isfinite(numbers(table, "order")) & (radius > 0)
+    start, end = (numbers(table, name)[kept] for name in ("node_a", "node_b"))
     diameter = 2 * radius[kept]
     # Where several vessels run into a node (a loop), the widest is the parent.
     into: dict[float, int] = {}
@@ -97,15 +98,9 @@ def _tree(table: pd.DataFrame) -> _Tree:
     return _Tree(
         _without_cycles(parent),
         diameter,
-        _numbers(table, "length_um")[kept],
-        _numbers(table, "resistance_share")[kept],
+        numbers(table, "length_um")[kept],
+        numbers(table, "resistance_share")[kept],
     )
-
-
-def _numbers(table: pd.DataFrame, column: str) -> np.ndarray:
-    if column not in table:
-        return np.full(len(table), np.nan)
-    return pd.to_numeric(table[column], errors="coerce").to_numpy(dtype=np.float64)
 
 
 def _without_cycles(parent: np.ndarray) -> np.ndarray:

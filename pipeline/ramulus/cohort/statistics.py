@@ -91,7 +91,7 @@ def compare(table: pd.DataFrame, settings: CohortSettings) -> pd.DataFrame:
             head = {"figure": figure.name, "role": role, "level": settings.level}
             alpha = (1 - settings.level) / share
             rows.append(head | _pair_row(stacks, pair, alpha, settings))
-    return pd.DataFrame(_adjusted(rows), columns=list(COMPARISON_COLUMNS))
+    return pd.DataFrame(_adjusted(rows), columns=list(COMPARISON_COLUMNS), dtype=object)
 
 
 def _role(figure: Figure, settings: CohortSettings) -> str:

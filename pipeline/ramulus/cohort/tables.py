@@ -10,6 +10,7 @@ from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
 
+import numpy as np
 import pandas as pd
 
 from ..errors import WorkFailedError
@@ -266,10 +267,10 @@ def csv_bytes(table: pd.DataFrame) -> bytes:
 def _cell(value: Any) -> str:
     if value is None or value is pd.NA or (isinstance(value, float) and math.isnan(value)):
         return ""
-    if isinstance(value, bool):
+    if isinstance(value, bool | np.bool_):
         return str(value).lower()
-    if isinstance(value, int | float):
-        return repr(value)
+    if isinstance(value, float):
+        return repr(float(value))  # numpy's own repr names its type
     text = str(value)
     harmless = text[:1] not in tuple("=+-@\t\r") or not text or _NUMBER.fullmatch(text)
     return text if harmless else f"'{text}"

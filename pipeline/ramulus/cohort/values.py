@@ -9,7 +9,7 @@ from .._cohort_settings import CohortSettings
 from ..errors import UnusableInputError
 from .figures import FIGURES, Figure
 
-__all__ = ["Values", "by_subject", "figures_of", "group_names", "stack_values"]
+__all__ = ["Values", "by_subject", "figures_of", "group_names", "numbers", "stack_values"]
 
 _Z_95 = 1.959963984540054  # the contract's intervals are at 0.95
 
@@ -97,12 +97,12 @@ def stack_values(table: pd.DataFrame, figure: Figure, settings: CohortSettings) 
     Values
         A value per stack that is done, has a group and has the figure.
     """
-    value = _numbers(table, figure.name)
+    value = numbers(table, figure.name)
     kept = np.isfinite(value) & (table["status"] == "done").to_numpy() & _has_group(table)
     if settings.rejected == "exclude":
         kept &= (table["rejected_by"].fillna("") == "").to_numpy()
     rows, value = table[kept], value[kept]
-    width = _numbers(rows, f"{figure.name}_low"), _numbers(rows, f"{figure.name}_high")
+    width = numbers(rows, f"{figure.name}_low"), numbers(rows, f"{figure.name}_high")
     scale = "log" if figure.scale == "log" and (value > 0).all() else "linear"
     if scale == "log":
         low, high = (np.log(np.where(edge > 0, edge, np.nan)) for edge in width)
@@ -125,7 +125,8 @@ def _labels(table: pd.DataFrame, column: str) -> np.ndarray:
     return labels
 
 
-def _numbers(table: pd.DataFrame, column: str) -> np.ndarray:
+def numbers(table: pd.DataFrame, column: str) -> np.ndarray:
+    """Return a column as float64, NaN where it is missing or no number."""
     if column not in table:
         return np.full(len(table), np.nan)
     return pd.to_numeric(table[column], errors="coerce").to_numpy(dtype=np.float64)
