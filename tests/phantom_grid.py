@@ -1,11 +1,11 @@
 """The phantoms on which accuracy is judged: named conditions, and seeds that were set apart.
 
 The edge of a voxel along y and x is 1 um, along z `ratio` um; radii and clearances are in um, so
-that a radius of 2 is two voxels of the finest axis. At 5:1 the thinnest vessels have 3.4 um: two edges of
-a cube as large as the voxel (their diameter is 1.4 slices).
+that a radius of 2 is two voxels of the finest axis. At 5:1 the thinnest vessels have 3.4 um: two
+edges of a cube as large as the voxel (their diameter is 1.4 slices).
 
-`TUNING` is for choosing methods and constants. `HELD_OUT` is for judging alone: no phantom of it may
-be looked at to choose anything. The two share no seed.
+`TUNING` is for choosing methods and constants. `HELD_OUT` is for judging alone: no phantom of it
+may be looked at to choose anything. The two share no seed.
 """
 
 from dataclasses import dataclass

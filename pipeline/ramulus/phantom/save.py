@@ -39,7 +39,7 @@ def save_phantom(
     z, y, x = stack.spacing_um
     tifffile.imwrite(
         path, voxels, ome=True, photometric="minisblack", compression="zlib",
-        compressionargs={"level": 9}, predictor=voxels.dtype.kind != "f",
+        compressionargs={"level": 9}, predictor=False,
         metadata={
             "axes": "ZYX", "Name": stack.name, "Creator": "ramulus",
             "UUID": f"urn:uuid:{uuid5(NAMESPACE_URL, identity)}",
