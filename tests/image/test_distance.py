@@ -66,5 +66,5 @@ def test_voxels_come_in_raster_order_with_the_maps_values():
 
 
 def test_a_mask_that_is_not_bool_is_refused_by_name():
-    with pytest.raises(UnusableInputError, match="inside.*uint8"):
+    with pytest.raises(UnusableInputError, match=r"inside.*uint8"):
         distance_um(np.zeros((3, 3, 3), dtype=np.uint8), spacing_um=(1, 1, 1))

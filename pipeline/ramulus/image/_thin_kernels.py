@@ -12,26 +12,52 @@ import numpy as np
 
 from ._simple_points import CENTRE, is_simple
 
-_HALF = 24
-_LOW = (1 << _HALF) - 1
+# A key holds, from the top: 15 bits of distance level, 40 of the hash of a block of 4 x 4 x 16
+# voxels, 8 of the hash of the place within the block. Voxels of one block are thus removed close
+# together in time, which keeps their words in the cache.
+_LEVEL_SHIFT = 48
 _ROUNDS = (0x9E3779B1, 0x85EBCA77, 0xC2B2AE3D)
 TOP_LEVEL = (1 << 15) - 1
 
 
 @numba.njit(cache=True, nogil=True)
-def order_keys(linear, distance_um, level_um):
-    """Number each voxel for the order of removal: distance level, then a one-to-one hash.
+def _shuffled(number, half):
+    """Hash a number of 2 * half bits one to one (a Feistel network over its two halves)."""
+    low = (1 << half) - 1
+    left, right = number >> half, number & low
+    for factor in _ROUNDS:
+        left, right = right, left ^ (((right + 1) * factor >> 17) & low)
+    return (left << half) | right
 
-    The hash is a Feistel network over the two halves of the voxel's 48-bit place in the volume, so
-    no two voxels share a key and the place can be read back from it.
+
+@numba.njit(cache=True, nogil=True)
+def _unshuffled(number, half):
+    """Undo `_shuffled`."""
+    low = (1 << half) - 1
+    left, right = number >> half, number & low
+    for k in range(len(_ROUNDS)):
+        factor = _ROUNDS[len(_ROUNDS) - 1 - k]
+        left, right = right ^ (((left + 1) * factor >> 17) & low), left
+    return (left << half) | right
+
+
+@numba.njit(cache=True, nogil=True)
+def order_keys(linear, distance_um, level_um, ny, nx):
+    """Number each voxel for the order of removal: distance level, then a one-to-one hash of place.
+
+    The hash depends on the voxel's place in the whole volume alone; no two voxels share a key.
     """
     keys = np.empty(len(linear), dtype=np.int64)
+    blocks_y, blocks_x = (ny + 3) >> 2, (nx + 15) >> 4
     for i in range(len(linear)):
-        left, right = linear[i] >> _HALF, linear[i] & _LOW
-        for factor in _ROUNDS:
-            left, right = right, left ^ (((right + 1) * factor >> 17) & _LOW)
+        row = linear[i] // nx
+        z = row // ny
+        y, x = row - z * ny, linear[i] - row * nx
+        block = _shuffled(((z >> 2) * blocks_y + (y >> 2)) * blocks_x + (x >> 4), 20)
+        inner = ((z & 3) << 6) | ((y & 3) << 4) | (x & 15)
+        inner = _shuffled(inner ^ (block & 255), 4)
         level = min(np.int64(distance_um[i] / level_um + 0.5), TOP_LEVEL)
-        keys[i] = (level << (2 * _HALF)) | (left << _HALF) | right
+        keys[i] = (level << _LEVEL_SHIFT) | (block << 8) | inner
     return keys
 
 
@@ -39,12 +65,17 @@ def order_keys(linear, distance_um, level_um):
 def addresses_of_keys(keys, ny, nx, row_bits):
     """Read the voxels' bit addresses back from their keys."""
     addresses = np.empty(len(keys), dtype=np.int64)
+    blocks_y, blocks_x = (ny + 3) >> 2, (nx + 15) >> 4
     for i in range(len(keys)):
-        left, right = (keys[i] >> _HALF) & _LOW, keys[i] & _LOW
-        for k in range(len(_ROUNDS)):
-            factor = _ROUNDS[len(_ROUNDS) - 1 - k]
-            left, right = right ^ (((left + 1) * factor >> 17) & _LOW), left
-        addresses[i] = address_of((left << _HALF) | right, ny, nx, row_bits)
+        block = (keys[i] >> 8) & ((1 << 40) - 1)
+        inner = _unshuffled(keys[i] & 255, 4) ^ (block & 255)
+        block = _unshuffled(block, 20)
+        row = block // blocks_x
+        plane = row // blocks_y
+        z = (plane << 2) | (inner >> 6)
+        y = ((row - plane * blocks_y) << 2) | ((inner >> 4) & 3)
+        x = ((block - row * blocks_x) << 4) | (inner & 15)
+        addresses[i] = ((z + 1) * (ny + 2) + y + 1) * row_bits + x + 1
     return addresses
 
 
@@ -53,7 +84,7 @@ def levels_of_keys(keys):
     """Read the voxels' distance levels back from their keys."""
     levels = np.empty(len(keys), dtype=np.int16)
     for i in range(len(keys)):
-        levels[i] = keys[i] >> (2 * _HALF)
+        levels[i] = keys[i] >> _LEVEL_SHIFT
     return levels
 
 
@@ -99,8 +130,9 @@ def neighbourhood(words, address, row_words, plane_words):
 def erode(words, addresses, levels, held, keep_ends, row_words, plane_words):
     """Remove simple voxels level by level, pass after pass, until none is left; clear their bits.
 
-    Within a level a round removes, in the order given, voxels that were simple when the round began
-    and still are: a plateau of equal distance is worn down from its rim, not eaten into at random.
+    Within a level the wall is taken off first, voxel by voxel in the order given. Then come rounds
+    that remove voxels which were simple when the round began and still are: a thin plateau of equal
+    distance is worn down evenly from its rim, not eaten into at random.
     With `keep_ends` a voxel with one neighbour stays; held voxels stay. The three arrays are
     compacted in place; returns how many voxels are left.
     """
@@ -132,27 +164,52 @@ def erode(words, addresses, levels, held, keep_ends, row_words, plane_words):
 @numba.njit(cache=True, nogil=True)
 def _wear_down(words, addresses, held, ready, begin, stop, keep_ends, row_words, plane_words):
     """Remove what can be removed of one level, whose voxels stand at begin:stop; return its end."""
+    for i in range(begin, stop):
+        code = neighbourhood(words, addresses[i], row_words, plane_words)
+        ready[i] = not held[i] and _count_bits(code) > _SHEET and is_simple(code)
+        if ready[i]:
+            _clear_bit(words, addresses[i])
     while True:
+        kept = begin
+        for i in range(begin, stop):
+            if not ready[i]:
+                addresses[kept] = addresses[i]
+                held[kept] = held[i]
+                kept += 1
+        stop = kept
         for i in range(begin, stop):
             ready[i] = not held[i] and _is_removable(
                 neighbourhood(words, addresses[i], row_words, plane_words), keep_ends
             )
-        kept = begin
+        removed = 0
         for i in range(begin, stop):
-            address = addresses[i]
-            if ready[i] and _is_removable(
-                neighbourhood(words, address, row_words, plane_words), keep_ends
-            ):
-                words[address >> 5] = np.uint32(
-                    np.int64(words[address >> 5]) & ~(1 << (address & 31))
-                )
-            else:
-                addresses[kept] = address
-                held[kept] = held[i]
-                kept += 1
-        if kept == stop:
-            return kept
-        stop = kept
+            ready[i] = ready[i] and _is_removable(
+                neighbourhood(words, addresses[i], row_words, plane_words), keep_ends
+            )
+            if ready[i]:
+                _clear_bit(words, addresses[i])
+                removed += 1
+        if removed == 0:
+            return stop
+
+
+# A voxel on the rim of a sheet one voxel thick has at most eight neighbours beside itself; some
+# more are allowed for rims of sheets two voxels thick.
+_SHEET = 11
+
+
+@numba.njit(cache=True, nogil=True)
+def _count_bits(code):
+    """Return how many of 27 bits are set."""
+    code -= (code >> 1) & 0x5555555
+    code = (code & 0x3333333) + ((code >> 2) & 0x3333333)
+    code = (code + (code >> 4)) & 0x0F0F0F0F
+    return (code * 0x01010101 >> 24) & 0xFF
+
+
+@numba.njit(cache=True, nogil=True)
+def _clear_bit(words, address):
+    words[address >> 5] = np.uint32(np.int64(words[address >> 5]) & ~(1 << (address & 31)))
 
 
 @numba.njit(cache=True, nogil=True)
@@ -262,7 +319,7 @@ def label_sets(start, neighbour, member):
 
 @numba.njit(cache=True, nogil=True)
 def accept_tips(
-    tips, is_cap, distance, before, start, neighbour, position_um, radius, marked, inside,
+    tips, is_cap, is_tip_root, distance, before, start, neighbour, position_um, radius, marked, inside,
     spacing_um, protrusion,
 ):  # fmt: skip
     """Tell which candidate tips stand out from what is marked, in the order given.
@@ -285,7 +342,17 @@ def accept_tips(
             continue
         ball = radius[base]
         run = distance[tip] - distance[base]
-        if is_cap[k]:
+        if before[base] < 0 and is_tip_root[base]:
+            # The first path of a part without loops, from end to end: it has no parent but its own
+            # widest place.
+            widest = ball
+            i = tip
+            while i != base:
+                widest = max(widest, radius[i])
+                i = before[i]
+            beyond = run + radius[tip] + radius[base] - 2.0 * widest
+            accepted[k] = run > widest if is_cap[k] else beyond > 2.0 * protrusion * widest
+        elif is_cap[k]:
             accepted[k] = run > ball
         elif run + radius[tip] - ball > protrusion * ball:
             own = 0.0

@@ -2,11 +2,13 @@
 
 from collections.abc import Sequence
 from dataclasses import dataclass
+from functools import partial
 
 import numpy as np
 
 from .._checks import checked_spacing_um, checked_volume
 from ._distance_kernels import square_along_planes, square_along_rows
+from .grid import in_threads
 
 __all__ = ["VesselVoxels", "distance_um", "vessel_voxels"]
 
@@ -104,6 +106,27 @@ def vessel_voxels(inside: np.ndarray, *, spacing_um: Sequence[float]) -> VesselV
     square_along_rows(column, row_start, nx, spacing[2], squared)
     occupied = np.diff(row_start).reshape(nz, ny) > 0
     z_planes, y_planes = np.flatnonzero(occupied.any(axis=1)), np.flatnonzero(occupied.any(axis=0))
-    square_along_planes(column, row_start, nx, 1, ny, z_planes * ny, spacing[1], squared)
-    square_along_planes(column, row_start, nx, ny, nz, y_planes, spacing[0], squared)
+    for step, rows, first, edge_um in (
+        (1, ny, z_planes * ny, spacing[1]),
+        (ny, nz, y_planes, spacing[0]),
+    ):
+        planes = partial(_lower_planes, column, row_start, nx, step, rows, first, edge_um, squared)
+        in_threads(planes, len(first))
     return VesselVoxels(linear, np.sqrt(squared, out=squared))
+
+
+def _lower_planes(
+    column: np.ndarray,
+    row_start: np.ndarray,
+    nx: int,
+    row_step: int,
+    rows: int,
+    first_rows: np.ndarray,
+    edge_um: float,
+    squared: np.ndarray,
+    start: int,
+    stop: int,
+) -> None:
+    """Run one pass over some of the planes; no two planes share a voxel."""
+    part = first_rows[start:stop]
+    square_along_planes(column, row_start, nx, row_step, rows, part, edge_um, squared)

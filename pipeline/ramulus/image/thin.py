@@ -1,6 +1,6 @@
 """Thinning of a mask to centreline voxels that keep its topology."""
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
@@ -89,14 +89,15 @@ def thin(mask: Mask, *, settings: ThinSettings | None = None) -> Skeleton:
     caps = _cut_caps(field, mask.inside)
     keys = field.keys(field.linear, field.distance_um)
     first = field.eroded(words, keys, field.keys_of(caps), keep_ends=True)
+    whole, field = field, field.restricted(first)
     caps = _caps_across(field, first, caps)
     core = field.lines_eroded(words, first, np.zeros(len(first), dtype=bool), keep_ends=False)
     set_bits(words, first)
     ends = _ends(field, mask.inside, first, caps, core, settings.tip_protrusion)
     lines = field.lines_eroded(words, first, ends, keep_ends=False)
-    lines = _run_out(field, mask.inside, words, lines, caps)
+    lines = _run_out(whole, mask.inside, words, lines, caps)
     return Skeleton(
-        field.grid.index(lines), field.radius_um(lines), field.grid.shape, mask.spacing_um,
+        field.grid.index(lines), whole.radius_um(lines), field.grid.shape, mask.spacing_um,
         mask.origin_um,
     )  # fmt: skip
 
@@ -156,6 +157,11 @@ class _Field:
         grid = BitGrid((nz, ny, nx))
         return cls(voxels.linear, voxels.distance_um, grid, mask.spacing_um, mask.origin_um)
 
+    def restricted(self, address: np.ndarray) -> "_Field":
+        """Return the field of some of the voxels, given by rising address."""
+        linear = self.grid.linear(self.grid.index(address))
+        return replace(self, linear=linear, distance_um=self.radius_um(address))
+
     def radius_um(self, address: np.ndarray) -> np.ndarray:
         """Return the distance to the background of voxels given by address."""
         linear = self.grid.linear(self.grid.index(address))
@@ -168,7 +174,9 @@ class _Field:
 
     def keys(self, linear: np.ndarray, distance_um: np.ndarray) -> np.ndarray:
         """Return a number for each voxel, no two alike: distance first, then the hash."""
-        keys: np.ndarray = order_keys(linear, distance_um, min(self.spacing_um) / _LEVELS_PER_VOXEL)
+        _, ny, nx = self.grid.shape
+        level_um = min(self.spacing_um) / _LEVELS_PER_VOXEL
+        keys: np.ndarray = order_keys(linear, distance_um, level_um, ny, nx)
         return keys
 
     def keys_of(self, address: np.ndarray) -> np.ndarray:
@@ -268,14 +276,15 @@ def _ends(
     alone = in_core & (np.bincount(label[in_core], minlength=count)[label] == 1)
     distance_um, _, source = geodesic(start, neighbour, position_um, np.flatnonzero(in_core))
     far = _farthest(distance_um, source, alone)
-    marked = in_core & ~alone
-    marked[far] = True
+    is_far = np.zeros(len(lines), dtype=bool)
+    is_far[far] = True
+    marked = (in_core & ~alone) | is_far
     distance_um, before, source = geodesic(start, neighbour, position_um, np.flatnonzero(marked))
     tips = np.flatnonzero(((np.diff(start) == 1) | is_cap) & ~marked)
     tips = tips[np.lexsort((tips, -distance_um[tips], ~is_cap[tips]))]
     accepted = accept_tips(
-        tips, is_cap[tips], distance_um, before, start, neighbour, position_um, radius_um, marked,
-        inside, np.array(field.spacing_um), protrusion,
+        tips, is_cap[tips], is_far, distance_um, before, start, neighbour, position_um, radius_um,
+        marked, inside, np.array(field.spacing_um), protrusion,
     )  # fmt: skip
     held = np.zeros(len(lines), dtype=bool)
     held[tips[accepted]] = True
