@@ -24,7 +24,7 @@ def ladder(*, shift=0.0, radius_scale=1.0):
 
 
 def test_the_truth_scores_full_marks_against_itself():
-    result = score(ladder(), ladder(), hindrance=lambda graph: 2.0)
+    result = score(ladder(), ladder(), hindrance=lambda _: 2.0)
     assert (result.junction_recall, result.junction_precision) == (1, 1)
     assert (result.centreline_recall, result.centreline_precision) == (1, 1)
     assert (result.length_ratio, result.hindrance_ratio) == (1, 1)
@@ -49,8 +49,7 @@ def test_a_lost_rung_costs_junctions_length_and_the_loop():
     assert result.junction_recall == 0.5
     assert result.junction_precision == 1.0
     assert result.length_ratio == pytest.approx(170 / 200)
-    # of the lost 30 um each end lies within 2 um (one coarse voxel; at the wide rail 3 um would do
-    # for a point of the rail, not of the rung) of a rail
+    # of the lost 30 um of radius 3 the 2 um (one coarse voxel) at either end lie near a rail
     assert result.centreline_recall == pytest.approx(1 - 26 / 200, abs=0.01)
     assert (result.loops, result.true_loops) == (0, 1)
     assert len(result.unmatched_true_um) == 2
@@ -79,12 +78,13 @@ def test_a_junction_is_found_within_two_voxels_or_the_radius(shift, recall):
 def test_junctions_match_one_to_one():
     truth = ladder()
     nodes = truth.node_position_um
-    twin = nodes[1] + [0, 0, 1.0]  # a second junction beside the first
+    twin = nodes[1] + np.array([0, 0, 1.0])  # a second junction beside the first
+    tips = [twin + np.array([s, 0, 0]) for s in (1.0, -1.0)]
     extra = CentrelineGraph.from_polylines(
-        [*nodes, twin, twin + [1, 0, 0], twin + [-1, 0, 0]],
+        [*nodes, twin, *tips],
         [*truth.segment_nodes, (8, 1), (8, 9), (8, 10)],
         [truth.point_position_um[truth.points_of(k)] for k in range(8)]
-        + [[twin, nodes[1]], [twin, twin + [1, 0, 0]], [twin, twin + [-1, 0, 0]]],
+        + [[twin, nodes[1]], [twin, tips[0]], [twin, tips[1]]],
         [np.full(31, 2.0)] * 8 + [[2, 2]] * 3,
         spacing_um=truth.spacing_um,
     )

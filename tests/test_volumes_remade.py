@@ -7,6 +7,7 @@ import numba
 import numpy as np
 import pytest
 import tifffile
+
 from ramulus.phantom.phantom import make_phantom
 from ramulus.phantom.truth import read_truth, truth_of
 

@@ -302,7 +302,7 @@ def test_flicker_changes_whole_slices():
 
 
 def test_uneven_filling_has_its_sd_along_the_vessels():
-    tube = straight_tube(radius_um=1, direction=(0, 0, 1), shape=(3, 3, 500), spacing_um=(1, 1, 1))
+    tube = straight_tube(radius_um=1, direction=(0, 0, 1), shape=(3, 3, 300), spacing_um=(1, 1, 1))
     settings = PLAIN.model_copy(update={"uneven_filling": 0.2, "uneven_length_um": 10})
     axis = draw(tube, settings=settings, seed=4).read()[1, 1]
     assert axis.std() == pytest.approx(0.2, rel=0.25)

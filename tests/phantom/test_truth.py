@@ -61,7 +61,7 @@ def test_hindrance_of_a_tree_equals_its_closed_form(row):
         asymmetry = lambda: ratio  # noqa: E731
     if "length factor" in name:
         factor = float(name.split("length factor ")[1].split()[0])
-        next_length = lambda length, radius, daughter: factor * length  # noqa: E731
+        next_length = lambda length, *_: factor * length  # noqa: E731
     else:
         next_length = lambda length, radius, daughter: length * daughter / radius  # noqa: E731
     tree = binary_tree(

@@ -90,7 +90,7 @@ class Scene:
         How the image looks.
     seed : int
         Seed of everything random.
-    shape, spacing_um, origin_um :
+    shape, spacing_um, origin_um : tuple
         The image's grid, z, y, x.
     starts, ends : (p, 3) float64
         Ends of the round cones, relative to the centre of voxel (0, 0, 0).
@@ -198,7 +198,23 @@ def compose(
     flatness: np.ndarray | None = None,
     wide_axis: np.ndarray | None = None,
 ) -> Scene:
-    """Make a graph ready to be drawn slab by slab; parameters as in `draw`."""
+    """Make a graph ready to be drawn slab by slab.
+
+    Parameters
+    ----------
+    graph, settings, seed, shape, origin_um, flatness, wide_axis
+        As in `draw`.
+
+    Returns
+    -------
+    Scene
+        For `draw_slab`.
+
+    Raises
+    ------
+    UnusableInputError
+        If a radius is not known, or the grid is not.
+    """
     spacing = checked_spacing_um("graph.spacing_um", graph.spacing_um)
     if shape is None:
         nz, ny, nx = (round(e / s) for e, s in zip(graph.extent_um, spacing, strict=True))
@@ -276,7 +292,10 @@ def _cones(
     starts, ends = np.concatenate([starts, beyond[0]]), np.concatenate([ends, beyond[1]])
     radii = np.concatenate([radii, np.stack([beyond[2], beyond[2]], axis=1)])
     segment = np.concatenate([segment, beyond[3]])
-    starts, ends, radii, source = _short(starts, ends, radii, min(graph.spacing_um))
+    longest_um = np.maximum(2 * radii.max(axis=1), 8 * min(graph.spacing_um))
+    if settings.uneven_filling > 0:  # brightness runs linearly along a cone
+        longest_um = np.minimum(longest_um, settings.uneven_length_um / 8)
+    starts, ends, radii, source = _short(starts, ends, radii, longest_um)
     segment = segment[source]
     light = _filling(starts, ends, radii, settings, seed)
     q, axis = q[segment], axis[segment]
@@ -334,11 +353,11 @@ def _end_direction(path: np.ndarray, radius: float) -> np.ndarray:
 
 
 def _short(
-    starts: np.ndarray, ends: np.ndarray, radii: np.ndarray, voxel_um: float
+    starts: np.ndarray, ends: np.ndarray, radii: np.ndarray, longest_um: np.ndarray
 ) -> tuple[np.ndarray, np.ndarray, np.ndarray, np.ndarray]:
     """Cut long cones into pieces, so that the box around each stays small."""
     length = np.linalg.norm(ends - starts, axis=1)
-    pieces = np.maximum(1, np.ceil(length / np.maximum(2 * radii.max(axis=1), 8 * voxel_um)))
+    pieces = np.maximum(1, np.ceil(length / longest_um))
     source = np.repeat(np.arange(len(starts)), pieces.astype(np.int64))
     first = np.concatenate(([0], np.cumsum(pieces)[:-1])).astype(np.int64)
     within = np.arange(len(source)) - first[source]

@@ -127,6 +127,20 @@ def grow(
 def daughters_of(parent_radius_um: float, asymmetry: float, exponent: float) -> tuple[float, float]:
     """Return the radii of the wider and the thinner daughter under a junction exponent.
 
+    Parameters
+    ----------
+    parent_radius_um : float
+        Radius of the parent.
+    asymmetry : float
+        Thinner over wider daughter, in (0, 1].
+    exponent : float
+        The x of parent**x = sum of daughters**x.
+
+    Returns
+    -------
+    tuple of float
+        Wider and thinner daughter.
+
     Examples
     --------
     >>> [round(r, 4) for r in daughters_of(1.0, 1.0, 3.0)]  # 2**(-1/3)
@@ -140,6 +154,16 @@ def optimal_angles_deg(parent: float, wider: float, thinner: float) -> tuple[flo
     """Return the angles to the parent's axis that need the least lumen volume.
 
     Murray 1926, J Gen Physiol 9:835: cos t1 = (r0^4 + r1^4 - r2^4) / (2 r0^2 r1^2), 2 likewise.
+
+    Parameters
+    ----------
+    parent, wider, thinner : float
+        Radii, in any one unit.
+
+    Returns
+    -------
+    tuple of float
+        Angles of the wider and the thinner daughter in degrees.
 
     Examples
     --------

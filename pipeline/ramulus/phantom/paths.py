@@ -25,7 +25,18 @@ class Box:
 
     @classmethod
     def of(cls, shape: tuple[int, int, int], spacing_um: tuple[float, float, float]) -> "Box":
-        """Return the box of a grid whose first voxel's centre is the origin."""
+        """Return the box of a grid whose first voxel's centre is the origin.
+
+        Parameters
+        ----------
+        shape, spacing_um : tuple
+            Voxels and their edges along z, y, x.
+
+        Returns
+        -------
+        Box
+            The box.
+        """
         spacing = np.asarray(spacing_um, dtype=np.float64)
         return cls(-0.5 * spacing, (np.asarray(shape) - 0.5) * spacing)
 
@@ -34,9 +45,19 @@ class Box:
         return np.concatenate([points_um - self.low_um, self.high_um - points_um], axis=1)
 
     def cut(self, path_um: np.ndarray) -> tuple[np.ndarray, int]:
-        """Cut a path where it first leaves; returns it and the face's number, or -1 if it does not.
+        """Cut a path where it first leaves.
 
-        The last point then lies exactly on the face.
+        Parameters
+        ----------
+        path_um : (n, 3) array
+            A path that begins inside.
+
+        Returns
+        -------
+        path_um : (k, 3) array
+            The path up to its crossing, which lies exactly on the face.
+        face : int
+            0 to 5 for z-low, y-low, x-low, z-high, y-high, x-high; -1 if it does not leave.
         """
         depth = self.depth_um(path_um)
         outside = np.flatnonzero(depth.min(axis=1) < 0)
@@ -67,6 +88,19 @@ def bent_path(
 
     The direction swings in two planes by (1 - cos) waves whose amplitudes are normal with SD
     `bend_deg`, kept so small that the radius of curvature is at least three vessel radii.
+
+    Parameters
+    ----------
+    start_um, direction : (3,) array
+        First point, and the unit vector along which the path leaves it.
+    length_um, step_um : float
+        Length of the path, largest step between points.
+    bend_deg : float
+        SD of the swings.
+    radius_um : float
+        Radius of the vessel.
+    rng : numpy.random.Generator
+        Source of the swings.
 
     Returns
     -------
@@ -111,6 +145,28 @@ def keeps_clear(
     With `arc_um`, the path's arc length from the node that it shares with the others, the path may
     be nearer where it has parted by `PARTING_SLOPE` times that length.
 
+    Parameters
+    ----------
+    path_um : (n, 3) array
+        The path, of one radius.
+    radius_um : float
+        Its radius.
+    others_um : (k, 3) array
+        Points of the other vessels.
+    other_radius_um : (k,) array
+        Their radii.
+    clearance_um : float
+        Smallest gap between the walls.
+    step_um : float
+        Largest step between points.
+    arc_um : (n,) array, optional
+        Arc length of the path's points from the shared node.
+
+    Returns
+    -------
+    bool
+        Whether the clearance is kept.
+
     Distances are taken between points, which stand for the stretch of half a step on either side:
     a step is added to the clearance, so that the lines themselves keep it.
     """
@@ -136,10 +192,24 @@ def arc_length_um(path_um: np.ndarray) -> np.ndarray:
 def segments_keep_clear(
     graph: CentrelineGraph, *, clearance_um: float, step_um: float
 ) -> np.ndarray:
-    """(m,) bool: which segments keep their clearance from all the others.
+    """Tell which segments keep their clearance from all the others.
 
     Segments that share a node are judged from that node on, where they part gradually. A segment
     is not judged against itself.
+
+    Parameters
+    ----------
+    graph : CentrelineGraph
+        Vessels with radii.
+    clearance_um : float
+        Smallest gap between the walls.
+    step_um : float
+        Largest step between points.
+
+    Returns
+    -------
+    (m,) bool array
+        True where a segment keeps clear.
     """
     clear = np.ones(graph.n_segments, dtype=bool)
     owner = graph.point_segment

@@ -51,9 +51,10 @@ def make_phantom(settings: PhantomSettings, seed: int) -> tuple[Stack, Centrelin
 
     Examples
     --------
-    >>> stack, truth = make_phantom(PhantomSettings(shape=(64, 96, 96)), seed=3)
-    >>> stack.shape, truth.spacing_um
-    ((64, 96, 96), (1.0, 1.0, 1.0))
+    >>> one_vessel = TreeSettings(root_radius_um=2, max_segments=1)
+    >>> stack, truth = make_phantom(PhantomSettings(shape=(24, 32, 32), tree=one_vessel), seed=3)
+    >>> stack.shape, truth.n_segments
+    ((24, 32, 32), 1)
     """
     spacing = checked_spacing_um("spacing_um", settings.spacing_um)
     if settings.kind == "tree":

@@ -19,10 +19,24 @@ __all__ = ["save_phantom", "truth_path"]
 def save_phantom(
     path: str | Path, stack: Stack, truth: CentrelineGraph, *, settings: PhantomSettings, seed: int
 ) -> Path:
-    """Write OUT.tif (OME-TIFF, zlib) and OUT.truth.json; returns the truth's path.
+    """Write OUT.tif (OME-TIFF, zlib) and OUT.truth.json.
 
     The same phantom gives the same bytes under the same versions of the libraries: the OME
     identifier is derived from the voxels.
+
+    Parameters
+    ----------
+    path : str or Path
+        Where the stack goes; ends in .tif or .tiff.
+    stack, truth
+        What `make_phantom` gave.
+    settings, seed
+        What it was given; both are recorded in the truth.
+
+    Returns
+    -------
+    Path
+        The truth's file.
 
     Raises
     ------
@@ -55,6 +69,21 @@ def save_phantom(
 
 def truth_path(path: str | Path) -> Path:
     """Return where the truth of a phantom file stands: OUT.truth.json beside OUT.tif.
+
+    Parameters
+    ----------
+    path : str or Path
+        The stack's file.
+
+    Returns
+    -------
+    Path
+        The truth's file.
+
+    Raises
+    ------
+    UnusableInputError
+        If the name does not end in .tif or .tiff.
 
     Examples
     --------

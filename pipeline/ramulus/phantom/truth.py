@@ -57,6 +57,18 @@ class Truth:
 def truth_of(graph: CentrelineGraph, *, made_with: dict[str, Any] | None = None) -> Truth:
     """Return the truth of a drawn graph.
 
+    Parameters
+    ----------
+    graph : CentrelineGraph
+        Vessels with radii.
+    made_with : dict, optional
+        Settings and seed, for the record.
+
+    Returns
+    -------
+    Truth
+        The graph with its inlet, outlets, loops and hindrance.
+
     Examples
     --------
     >>> from ramulus.phantom.tubes import straight_tube
@@ -74,7 +86,18 @@ def truth_of(graph: CentrelineGraph, *, made_with: dict[str, Any] | None = None)
 
 
 def inlet_of(graph: CentrelineGraph) -> int:
-    """Return the widest vessel end that the volume's edge cuts, or -1."""
+    """Return the widest vessel end that the volume's edge cuts.
+
+    Parameters
+    ----------
+    graph : CentrelineGraph
+        Vessels with radii.
+
+    Returns
+    -------
+    int
+        The node, or -1 if the edge cuts none.
+    """
     end_node, end_radius = _ends(graph)
     cut = graph.node_kind[end_node] == NODE_KINDS.index("border")
     if not cut.any():
@@ -83,7 +106,20 @@ def inlet_of(graph: CentrelineGraph) -> int:
 
 
 def outlets_of(graph: CentrelineGraph, inlet: int) -> np.ndarray:
-    """Return the outlets: every free end but the inlet in a tree, the cut ends but it in a mesh."""
+    """Return the outlets: every free end but the inlet in a tree, the cut ends but it in a mesh.
+
+    Parameters
+    ----------
+    graph : CentrelineGraph
+        The network; with a loop it counts as a mesh, whose blind ends carry no flow.
+    inlet : int
+        The inlet's node, or -1.
+
+    Returns
+    -------
+    (k,) int64 array
+        Nodes.
+    """
     degree_one = graph.node_degree() == 1
     if _loops(graph) > 0:
         degree_one &= graph.node_kind == NODE_KINDS.index("border")
@@ -94,6 +130,20 @@ def outlets_of(graph: CentrelineGraph, inlet: int) -> np.ndarray:
 
 def network_hindrance_per_um3(graph: CentrelineGraph, inlet: int, outlets: np.ndarray) -> float:
     """Return the hindrance from the inlet to the outlets, which are held at one pressure.
+
+    Parameters
+    ----------
+    graph : CentrelineGraph
+        Vessels with radii.
+    inlet : int
+        A node.
+    outlets : (k,) array_like
+        Nodes, the inlet not among them.
+
+    Returns
+    -------
+    float
+        Hindrance in um**-3.
 
     Raises
     ------
@@ -119,7 +169,15 @@ def network_hindrance_per_um3(graph: CentrelineGraph, inlet: int, outlets: np.nd
 
 
 def write_truth(path: str | Path, truth: Truth) -> None:
-    """Write a truth as JSON; positions and radii are rounded to 1e-6 um."""
+    """Write a truth as JSON; positions and radii are rounded to 1e-6 um.
+
+    Parameters
+    ----------
+    path : str or Path
+        The file.
+    truth : Truth
+        What to write.
+    """
     graph = truth.graph
     nodes = [
         {"node_id": k, "kind": str(kind), "position_um": _rounded(place)}
@@ -155,6 +213,16 @@ def write_truth(path: str | Path, truth: Truth) -> None:
 
 def read_truth(path: str | Path) -> Truth:
     """Read what `write_truth` wrote.
+
+    Parameters
+    ----------
+    path : str or Path
+        The file.
+
+    Returns
+    -------
+    Truth
+        What it holds.
 
     Raises
     ------

@@ -146,7 +146,25 @@ def helix_tube(
 ) -> CentrelineGraph:
     """Return a helical tube around the volume's middle, its axis along z (0), y (1) or x (2).
 
-    The axis' length is turns * sqrt((2 pi helix_radius)**2 + pitch**2).
+    The tube's length is turns * sqrt((2 pi helix_radius)**2 + pitch**2).
+
+    Parameters
+    ----------
+    radius_um, helix_radius_um, pitch_um : float
+        Radius of the tube, of the helix, and its rise a turn.
+    turns : float
+        Number of turns.
+    shape, spacing_um : tuple
+        The volume's grid.
+    axis : int
+        Along which the helix rises.
+    step_um : float
+        Largest step between points.
+
+    Returns
+    -------
+    CentrelineGraph
+        One segment that ends inside.
 
     Examples
     --------
@@ -185,7 +203,7 @@ def y_junction(
     asymmetry : float
         Thinner over wider daughter, in (0, 1].
     exponent : float
-        parent**x = sum of daughters**x.
+        The x of parent**x = sum of daughters**x.
     shape, spacing_um : tuple
         The volume's grid.
     angles_deg : pair of float, optional
@@ -239,6 +257,18 @@ def ellipse_axes_um(radius_um: float, flatness: float) -> tuple[float, float, fl
     The ellipse has the area of a circle of `radius_um` and narrow / wide = `flatness`, as `draw`
     takes it. Laminar flow: Q = pi a^3 b^3 dP / (4 mu L (a^2 + b^2)), so that the circle of equal
     resistance has r^4 = 2 a^3 b^3 / (a^2 + b^2).
+
+    Parameters
+    ----------
+    radius_um : float
+        Radius of the circle of equal area.
+    flatness : float
+        Narrow over wide axis, in (0, 1].
+
+    Returns
+    -------
+    tuple of float
+        Wide semi-axis, narrow semi-axis, hydraulic radius in um.
 
     Examples
     --------
