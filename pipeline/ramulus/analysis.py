@@ -363,7 +363,7 @@ def _summary(graph, rooting, radii, order, diameter, found, tables, pooled, cond
     ordered = order > 0
     summary: dict[str, Any] = {
         "total_length_um": float(length.sum()), "segments": graph.n_segments,
-        "junctions": int((degree >= 3).sum()), "ends": int(tips.sum()),
+        "junctions": int(((degree >= 3) | (np.isin(np.arange(graph.n_nodes), rooting.roots) & (degree >= 2))).sum()), "ends": int(tips.sum()),
         "border_ends": int((tips & _at_border(graph)).sum()), "components": rooting.n_parts,
         "loops": rooting.n_loops, "loop_share": rooting.loop_share,
         "radius_median_um": float(np.nanmedian(radii.mean_um)),

@@ -19,8 +19,8 @@ class RootSettings(Settings):
     """Settings of the root."""
 
     inlet: Literal["widest_border", "position", "node"] = setting(
-        "widest_border", "the inlet: the widest end that the volume's edge cuts (of the largest part), the"
-        " end nearest to given positions, or given nodes",
+        "widest_border", "the inlet: the root that a graph's file names, else the widest end that the volume's"
+        " edge cuts (of the largest part); the end nearest to given positions; or given nodes",
     )  # fmt: skip
     inlet_um: tuple[tuple[float, float, float], ...] = setting(
         (), "positions z, y, x of the inlets for inlet = position", unit="um"
@@ -80,6 +80,9 @@ def choose_inlets(graph: CentrelineGraph, *, settings: RootSettings) -> Inlets:
         return _given_nodes(graph, settings)
     if settings.inlet == "position":
         return _nearest_ends(graph, settings)
+    named = np.flatnonzero(graph.node_kind == NODE_KINDS.index("inlet"))
+    if len(named):
+        return Inlets(named, f"the root that the graph's file names: node {int(named[0])}")
     return _widest_end(graph)
 
 
