@@ -32,6 +32,8 @@ def summary(sample, *, exponent=3.0, length_um=1000.0, flags=()):
         "network_hindrance_per_um3": estimate(length_um / 100, 1.0),
         "trunk_taper_b": {"value": None, "reason": "the trunk is too short"},
         "outlet_rule": "free ends",
+        "image": {"contrast_to_noise": 9.5, "blur_origin": "estimated", "odd key": 1.0},
+        "dominant_segments": [4, 2, 1],
         "flags": list(flags),
     }
 

@@ -23,7 +23,7 @@ def write_whole(path: Path, content: bytes) -> str:
             file.write(content)
             file.flush()
             os.fsync(file.fileno())
-            os.chmod(beside, 0o666 & ~_umask())  # noqa: PTH101 - temporary files are for their owner alone
+            beside.chmod(0o666 & ~_umask())  # temporary files are for their owner alone
             beside.replace(path)
         except BaseException:
             with suppress(OSError):
@@ -32,14 +32,14 @@ def write_whole(path: Path, content: bytes) -> str:
     return hashlib.sha256(content).hexdigest()
 
 
-def sha256_of(path: Path) -> str:
-    """Return the SHA-256 of a file, read in pieces."""
-    with path.open("rb") as file:
-        return hashlib.file_digest(file, "sha256").hexdigest()
-
-
 def _umask() -> int:
     """Return the process's umask; it can only be read by setting it."""
     mask = os.umask(0o022)
     os.umask(mask)
     return mask
+
+
+def sha256_of(path: Path) -> str:
+    """Return the SHA-256 of a file, read in pieces."""
+    with path.open("rb") as file:
+        return hashlib.file_digest(file, "sha256").hexdigest()

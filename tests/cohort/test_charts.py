@@ -106,6 +106,12 @@ def test_ticks_lie_inside_and_are_few(start, width):
     assert 2 <= len(ticks) <= 12
 
 
+def test_ticks_are_written_out_without_idle_zeros():
+    svg = strip([("a", [dot("s1", 0.0475), dot("s2", 0.056)])])
+    words = [text.text for text in svg.iter("text") if text.get("text-anchor") == "end"]
+    assert words == ["0.048", "0.05", "0.052", "0.054", "0.056"]
+
+
 def test_group_lines_lie_over_sample_lines():
     lines = [
         Line("mean", [1, 2], [1.0, 2.0], 0, strong=True),

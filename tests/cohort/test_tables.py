@@ -54,6 +54,9 @@ def test_a_row_a_sample_with_figures_intervals_status_and_flags(study):
     assert (first.segments, first.segments_low) == (7, None)
     assert (first.spacing_z_um, first.spacing_origin_x, first.shape_y) == (2.0, "user", 20)
     assert first.outlet_rule == "free ends"
+    assert first.image_contrast_to_noise == 9.5
+    assert "image_odd key" not in table
+    assert first.dominant_segments == "4 2 1"
     assert pd.isna(first.trunk_taper_b)
     assert (first["flags"], first.rejected_by) == ("anisotropic", "")
     assert (rejected["flags"], rejected.rejected_by) == ("anisotropic snr_low", "snr_low")

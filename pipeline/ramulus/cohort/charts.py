@@ -271,9 +271,17 @@ class _Axis:
         for tick in _ticks(self.low, self.high, self.scale):
             y = self.place(tick)
             yield f'<path class="grid" d="M{_LEFT:.1f} {y:.1f}H{width - 4:.1f}"/>'
-            yield _text(_LEFT - 5, y + 3.5, number(tick, 2), "end", "tick")
+            yield _text(_LEFT - 5, y + 3.5, _tick_words(tick), "end", "tick")
         if unit:
             yield _text(2, 10, unit, "start", "tick")
+
+
+def _tick_words(tick: float) -> str:
+    """Return a round value without idle zeros."""
+    mantissa, times, power = number(tick).partition(" ")
+    if "." in mantissa:
+        mantissa = mantissa.rstrip("0").rstrip(".")
+    return f"{mantissa}{times}{power}"
 
 
 def _ticks(low: float, high: float, scale: str) -> list[float]:

@@ -16,7 +16,13 @@ from .values import Values, by_subject, figures_of, numbers, stack_values
 
 __all__ = ["batch_effects", "outliers", "plan", "quality_links"]
 
-_SUSPECTS = ("smallest_resolved_radius_um", "spacing_z_um", "spacing_x_um", "depth_um")
+_SUSPECTS = (
+    "smallest_resolved_radius_um",
+    "image_contrast_to_noise",
+    "spacing_z_um",
+    "spacing_x_um",
+    "depth_um",
+)
 
 
 def outliers(table: pd.DataFrame, settings: CohortSettings) -> pd.DataFrame:
@@ -154,7 +160,7 @@ def plan(table: pd.DataFrame, figure: Figure, settings: CohortSettings) -> pd.Da
 
 
 def quality_links(table: pd.DataFrame, settings: CohortSettings) -> pd.DataFrame:
-    """Correlate the primary figures with what should not matter: resolution, spacing, depth.
+    """Correlate the primary figures with what should not matter: resolution, noise, spacing, depth.
 
     Spearman's rank correlation of one value per subject, the groups' means taken out of both.
 

@@ -8,11 +8,12 @@ from typing import Any
 import numpy as np
 import pandas as pd
 
+from ..report.page import CAUTION
 from .charts import Dot, Line, legend, line_chart, number, strip_chart
 from .figures import FIGURES, Figure
 from .study import CohortResults
 from .values import by_subject, figures_of, group_names, numbers, stack_values
-from .wording import CAUTION, finding, methods_text, p_value, warnings_of
+from .wording import finding, methods_text, p_value, records, warnings_of
 
 __all__ = ["cohort_page"]
 
@@ -75,20 +76,16 @@ def cohort_page(results: CohortResults, versions: Mapping[str, str]) -> str:
         primary=primary,
         sections=[("Outcomes", rest), ("Image quality", quality)],
         order_charts=_order_charts(results),
-        comparisons=[_comparison(row) for row in _records(results.comparisons)],
-        failures=_records(results.failures),
-        flags=_records(results.flags),
-        outliers=[_labelled(row) for row in _records(results.outliers)],
-        batches=[_labelled(row) for row in _records(results.batches)],
-        links=[_labelled(row) for row in _records(results.links)],
+        comparisons=[_comparison(row) for row in records(results.comparisons)],
+        failures=records(results.failures),
+        flags=records(results.flags),
+        outliers=[_labelled(row) for row in records(results.outliers)],
+        batches=[_labelled(row) for row in records(results.batches)],
+        links=[_labelled(row) for row in records(results.links)],
         plans=[_plan(name, table) for name, table in results.plans.items() if len(table)],
         methods=methods_text(results, versions),
         settings=_settings(results),
     )
-
-
-def _records(frame: pd.DataFrame) -> list[dict[str, Any]]:
-    return [{str(name): cell for name, cell in row.items()} for row in frame.to_dict("records")]
 
 
 def _safe(svg: str) -> Any:
@@ -148,7 +145,7 @@ def _panel(results: CohortResults, figure: Figure) -> _Panel:
         unit=figure.unit,
         scale=figure.scale if subjects.scale == "log" else "linear",
     )  # fmt: skip
-    rows = _records(results.comparisons[results.comparisons["figure"] == figure.name])
+    rows = records(results.comparisons[results.comparisons["figure"] == figure.name])
     return _Panel(figure.name, figure.label, _safe(chart), [finding(row) for row in rows])
 
 

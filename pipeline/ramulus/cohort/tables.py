@@ -136,9 +136,12 @@ def _figure_cells(summary: Mapping[str, Any]) -> dict[str, Any]:
 
 
 def _estimate_cells(name: str, value: Mapping[str, Any]) -> dict[str, Any]:
-    """Return value, low and high; an object without "value" is no figure."""
+    """Return value, low and high; of an object without "value", its numbers under both names."""
     if "value" not in value:
-        return {}
+        numbers = {f"{name}_{key}": _number(cell) for key, cell in value.items()}
+        return {
+            key: cell for key, cell in numbers.items() if cell is not None and key.isidentifier()
+        }
     found = {
         name: value["value"],
         f"{name}_low": value.get("low"),

@@ -11,13 +11,7 @@ from .figures import FIGURES
 from .study import CohortResults
 from .values import group_names
 
-__all__ = ["CAUTION", "finding", "methods_text", "p_value", "warnings_of"]
-
-CAUTION = (
-    "This is research software. It is not a medical device and not for diagnosis or treatment "
-    "decisions. Follow your laboratory's and local rules for human and animal data, and have "
-    "clinical questions answered by licensed professionals."
-)
+__all__ = ["finding", "methods_text", "p_value", "records", "warnings_of"]
 
 
 def p_value(p: Any) -> str:
@@ -31,6 +25,11 @@ def p_value(p: Any) -> str:
     if pd.isna(p):
         return ""
     return "< 0.001" if p < 0.001 else f"{p:.2g}" if p < 0.1 else f"{p:.2f}"
+
+
+def records(frame: pd.DataFrame) -> list[dict[str, Any]]:
+    """Return the rows of a table by column name."""
+    return [{str(name): cell for name, cell in row.items()} for row in frame.to_dict("records")]
 
 
 def finding(row: Mapping[str, Any]) -> str:
