@@ -3,7 +3,7 @@
 import numba
 import numpy as np
 
-from ._clean_kernels import smooth_to_slack
+from ._centreline_kernels import smooth_to_slack
 
 
 @numba.njit(cache=True, nogil=True)
@@ -35,7 +35,7 @@ def lines(points, map_um, arc, offsets, segment_nodes, node, trim, keep_from, ke
                 column[j + 1, c] = interpolated(arc, map_um, a, b, s_um[begin + j])
             column[0], column[size - 1] = column[1], column[size - 2]
             line[0], line[size - 1] = node[segment_nodes[i, 0]], node[segment_nodes[i, 1]]
-            smooth_to_slack(line, np.ones(size), slack_um, 30.0, smooth)
+            smooth_to_slack(line, np.ones(size), np.ones(3), np.ones(3), slack_um, 30.0, smooth)
         else:
             for j in range(size):
                 line[j] = points[a + j]
