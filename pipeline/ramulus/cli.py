@@ -1,164 +1,287 @@
-"""The commands: parse, call, print; no science here."""
+"""The commands: parse, call, print; no science here.
 
-import json
+Each command imports what it runs when it runs, so that `ramulus --help` and the shell's completion
+answer at once.
+"""
+
 import sys
 import traceback
+from collections.abc import Iterator, Sequence
+from contextlib import contextmanager
 from pathlib import Path
-from typing import Annotated
+from typing import TYPE_CHECKING, Annotated, Any, NoReturn
 
 import typer
 
 from . import __version__
-from .config import (
-    Configuration, as_toml, explained_toml, load_configuration, preset_path, with_changes,
-)
 from .errors import RamulusError, UnusableInputError
-from .inspection import inspect_lines
-from .measure import measure, sample_configuration
-from .phantom.phantom import make_phantom
-from .phantom.save import save_phantom
 from .progress import Reporter
 
-app = typer.Typer(
-    name="ramulus", no_args_is_help=True, add_completion=True, pretty_exceptions_enable=False,
-    help="From a 3-D stack of blood vessels to a graph with radii, orders, cube law and resistance."
-    " Research software: not a medical device, not for diagnosis or treatment decisions.",
-)  # fmt: skip
+if TYPE_CHECKING:
+    from .config import Configuration
 
-ConfigOption = Annotated[Path | None, typer.Option("--config", help="TOML file with settings (see ramulus config).")]
-PresetOption = Annotated[str, typer.Option("--preset", help="Shipped settings for a kind of image.")]
-SetOption = Annotated[list[str] | None, typer.Option("--set", help="section.key=value; may be repeated.")]
-SpacingOption = Annotated[tuple[float, float, float] | None, typer.Option("--spacing-um", help="Voxel edges Z Y X in um.")]
-QuietOption = Annotated[bool, typer.Option("--quiet", help="Print errors only.")]
-LogOption = Annotated[Path | None, typer.Option("--log", help="Also write what is done to this file.")]
-DebugOption = Annotated[bool, typer.Option("--debug", help="Show where an error arose.")]
+__all__ = ["app", "main"]
+
+app = typer.Typer(
+    name="ramulus",
+    add_completion=True,
+    no_args_is_help=True,
+    pretty_exceptions_enable=False,
+    rich_markup_mode=None,
+    help="""From a 3-D stack of blood vessels to a graph with radii, branching orders, the law of
+    branching at every junction and the network's resistance, each figure with its interval.
+
+    Research software: not a medical device, not for diagnosis or treatment decisions.
+
+    Exit status: 0 done; 1 the work failed; 2 the request or the input cannot be used.""",
+)
+
+Source = Annotated[
+    Path,
+    typer.Argument(
+        metavar="INPUT",
+        help="A stack (TIFF, a folder of TIFF slices, NIfTI ...), a mask, a vessel graph (SWC, or"
+        " the folder of a sample), or a sample TOML whose input.stack names one.",
+    ),
+]
+Out = Annotated[Path, typer.Option("--out", metavar="DIR", help="Folder for the results.")]
+Config = Annotated[
+    Path | None,
+    typer.Option("--config", metavar="FILE.toml", help="Settings; see ramulus config --explain."),
+]
+Spacing = Annotated[
+    tuple[float, float, float] | None,
+    typer.Option("--spacing-um", metavar="Z Y X", help="Voxel edges in um, if the file has none."),
+]
+Changes = Annotated[
+    list[str] | None,
+    typer.Option("--set", metavar="SECTION.KEY=VALUE", help="Change one setting; repeatable."),
+]
+Quiet = Annotated[bool, typer.Option("--quiet", help="Print errors only.")]
+Log = Annotated[
+    Path | None, typer.Option("--log", metavar="FILE", help="Add what is done to this file.")
+]
+Debug = Annotated[bool, typer.Option("--debug", help="Show where an error arose.")]
+
+
+def _presets(incomplete: str) -> list[str]:
+    from .config import preset_names
+
+    return [name for name in preset_names() if name.startswith(incomplete)]
+
+
+Preset = Annotated[
+    str,
+    typer.Option(
+        "--preset", metavar="NAME", autocompletion=_presets,
+        help="Shipped settings: confocal, two_photon, micro_ct, mr_angiography, demo.",
+    ),
+]  # fmt: skip
 
 
 @app.command("measure")
 def measure_command(
-    source: Annotated[Path, typer.Argument(metavar="INPUT", help="A stack, a mask, a graph, or a sample TOML.")],
-    out: Annotated[Path, typer.Option("--out", help="Folder for the results.")],
-    config: ConfigOption = None, preset: PresetOption = "", spacing_um: SpacingOption = None,
-    changes: SetOption = None, quiet: QuietOption = False, log: LogOption = None, debug: DebugOption = False,
-) -> None:  # fmt: skip
-    """Measure one sample: graph, radii, orders, cube law, resistance, QC report."""
-    configuration = _configuration(config, preset, changes, spacing_um)
-    name = ""
-    if source.suffix.lower() == ".toml":
-        configuration = load_configuration(source, changes=_with_spacing(changes, spacing_um))
-        name = source.stem
-        source, configuration = sample_configuration(source, configuration)
-    with Reporter(quiet=quiet, log=log) as reporter:
-        folder = measure(source, out=out, configuration=configuration, name=name, progress=reporter)
-        reporter.done(_closing_lines(folder))
+    source: Source,
+    out: Out,
+    config: Config = None,
+    preset: Preset = "",
+    spacing_um: Spacing = None,
+    changes: Changes = None,
+    quiet: Quiet = False,
+    log: Log = None,
+    debug: Debug = False,
+) -> None:
+    """Measure one sample: graph, radii, orders, law of branching, resistance, QC report.
+
+    Settings are taken from the preset, then --config, then the sample TOML, then --set. A run that
+    was stopped is taken up by running the same line again; earlier results stay until the new ones
+    are complete.
+
+    Example: ramulus measure stack.ome.tif --out results --spacing-um 2 0.5 0.5
+    """
+    with _session(quiet, log, debug) as reporter:
+        from .closing import closing_lines
+        from .measure import measure
+
+        stack, name, configuration = _request(source, config, preset, spacing_um, changes)
+        folder = measure(stack, out=out, configuration=configuration, name=name, progress=reporter)
+        reporter.done(closing_lines(folder))
 
 
 @app.command("inspect")
 def inspect_command(
-    source: Annotated[Path, typer.Argument(metavar="INPUT", help="A stack.")],
-    config: ConfigOption = None, preset: PresetOption = "", spacing_um: SpacingOption = None,
-    changes: SetOption = None, quiet: QuietOption = False, log: LogOption = None, debug: DebugOption = False,
-) -> None:  # fmt: skip
-    """Read only the header: shape, type, spacing and its origin, channels, the plan, every problem."""
-    lines, usable = inspect_lines(source, _configuration(config, preset, changes, spacing_um))
-    with Reporter(quiet=quiet, log=log) as reporter:
+    source: Source,
+    config: Config = None,
+    preset: Preset = "",
+    spacing_um: Spacing = None,
+    changes: Changes = None,
+    quiet: Quiet = False,
+    log: Log = None,
+    debug: Debug = False,
+) -> None:
+    """Read only the header: shape, type, spacing and where it is from, the plan, every problem.
+
+    Exit status 2 if the input could not be measured with these settings.
+    """
+    with _session(quiet, log, debug) as reporter:
+        from .inspection import inspect_lines
+
+        stack, _, configuration = _request(source, config, preset, spacing_um, changes)
+        lines, usable = inspect_lines(stack, configuration)
         reporter.done(lines)
     if not usable:
-        raise typer.Exit(2)
+        raise typer.Exit(UnusableInputError.exit_status)
 
 
 @app.command("phantom")
 def phantom_command(
-    out: Annotated[Path, typer.Argument(metavar="OUT.tif", help="The stack to write; OUT.truth.json goes beside it.")],
-    config: ConfigOption = None, seed: Annotated[int, typer.Option("--seed", min=0, help="Seed.")] = 1,
-    changes: SetOption = None, quiet: QuietOption = False, log: LogOption = None, debug: DebugOption = False,
-) -> None:  # fmt: skip
-    """Draw a synthetic stack with its known graph."""
-    settings = _configuration(config, "", changes, None).phantom
-    with Reporter(quiet=quiet, log=log) as reporter:
+    out: Annotated[
+        Path, typer.Argument(metavar="OUT.tif", help="The stack; OUT.truth.json goes beside it.")
+    ],
+    config: Config = None,
+    seed: Annotated[int, typer.Option("--seed", min=0, help="Seed of all that is random.")] = 1,
+    changes: Changes = None,
+    quiet: Quiet = False,
+    log: Log = None,
+    debug: Debug = False,
+) -> None:
+    """Draw a synthetic stack whose vessel graph is known.
+
+    Settings are those of the section phantom.
+
+    Example: ramulus phantom tree.ome.tif --seed 3 --set phantom.tree.exponent=2.7
+    """
+    with _session(quiet, log, debug) as reporter:
+        from .phantom.phantom import make_phantom
+        from .phantom.save import save_phantom
+
+        settings = _configuration([config], "", None, changes).phantom
         reporter("phantom", 0.0)
         stack, truth = make_phantom(settings, seed)
         beside = save_phantom(out, stack, truth, settings=settings, seed=seed)
-        reporter.done([f"{out}: {stack.shape} voxels, {truth.n_segments} segments", f"{beside}: the truth"])
+        size = " x ".join(map(str, stack.shape))
+        reporter.done([f"{out}: {size} voxels, {truth.n_segments} segments", f"truth: {beside}"])
 
 
 @app.command("config")
 def config_command(
-    explain: Annotated[bool, typer.Option("--explain", help="With the meaning, unit and source of each key.")] = False,
-    preset: PresetOption = "", quiet: QuietOption = False, log: LogOption = None, debug: DebugOption = False,
-) -> None:  # fmt: skip
-    """Print the whole default configuration as TOML."""
-    configuration = _configuration(None, preset, None, None)
-    text = explained_toml(configuration) if explain else as_toml(configuration)
-    with Reporter(quiet=quiet, log=log) as reporter:
-        reporter.done([text.strip()])
+    explain: Annotated[
+        bool, typer.Option("--explain", help="With the meaning, unit and source of each key.")
+    ] = False,
+    config: Config = None,
+    preset: Preset = "",
+    changes: Changes = None,
+    quiet: Quiet = False,
+    log: Log = None,
+    debug: Debug = False,
+) -> None:
+    """Print the whole configuration as TOML: the defaults, or a preset's or a file's.
+
+    Example: ramulus config --explain > settings.toml
+    """
+    with _session(quiet, log, debug) as reporter:
+        from .config import as_toml
+
+        configuration = _configuration([config], preset, None, changes)
+        reporter.done([as_toml(configuration, explain=explain)])
+
+
+@app.command("compare")
+def compare_command(
+    first: Annotated[Path, typer.Argument(metavar="DIR", help="Results of one run.")],
+    second: Annotated[Path, typer.Argument(metavar="DIR", help="Results of another run.")],
+    quiet: Quiet = False,
+    log: Log = None,
+    debug: Debug = False,
+) -> None:
+    """Compare two runs of one sample: what changed, and what was different about the runs."""
+    with _session(quiet, log, debug) as reporter:
+        from .compare import compare
+
+        reporter.done(compare(first, second).lines())
 
 
 @app.callback(invoke_without_command=True)
-def version_option(version: Annotated[bool, typer.Option("--version", help="Print the version.")] = False) -> None:
-    """Answer --version."""
+def _version(
+    version: Annotated[bool, typer.Option("--version", help="Print the version.")] = False,
+) -> None:
     if version:
         typer.echo(f"ramulus {__version__}")
         raise typer.Exit
 
 
-def main() -> None:
-    """Run a command; errors become one line and an exit status."""
-    debug = "--debug" in sys.argv
+def main(arguments: Sequence[str] | None = None) -> NoReturn:
+    """Run a command; whatever goes wrong becomes one line and an exit status."""
     try:
-        app(standalone_mode=True)
+        status = app(args=arguments, prog_name="ramulus", standalone_mode=False)
+        sys.exit(status if isinstance(status, int) else 0)
+    except typer.Abort:
+        _end("interrupted", 1)
+    except _UsageError as error:
+        if type(error).__name__ == "NoArgsIsHelpError":
+            print(error.format_message())  # noqa: T201 - what was asked for
+            sys.exit(error.exit_code)
+        command = error.ctx.command_path if error.ctx else "ramulus"
+        _end(f"{error.format_message()} (see {command} --help)", error.exit_code)
+
+
+_UsageError: Any = typer.BadParameter.__mro__[1]
+"""What is wrong with a command line; newer Typers carry Click's class inside."""
+
+
+@contextmanager
+def _session(quiet: bool, log: Path | None, debug: bool) -> Iterator[Reporter]:  # noqa: FBT001
+    """Report one command's progress, and end it in one line if it fails."""
+    try:
+        with Reporter(quiet=quiet, log=log) as reporter:
+            yield reporter
     except RamulusError as error:
-        _fail(str(error), error.exit_status, debug=debug)
+        _end(str(error), error.exit_status, debug=debug)
     except KeyboardInterrupt:
-        _fail("interrupted; earlier results are as they were", 1, debug=False)
-    except BrokenPipeError:
-        sys.exit(0)
-    except Exception as error:  # noqa: BLE001 - a user is never shown a traceback unasked
-        _fail(f"internal error ({type(error).__name__}: {error}); --debug shows where", 1, debug=debug)
+        _end("interrupted; earlier results are as they were", 1, debug=debug)
+    except BrokenPipeError:  # the reader of our output has left: head, less
+        sys.stderr.close()
+        raise SystemExit(1) from None
+    except MemoryError:
+        _end("out of memory", 1, debug=debug)
+    except Exception as error:  # noqa: BLE001 - a user is shown no traceback unasked
+        words = f"{type(error).__name__}: {error}"
+        _end(f"fault in the program ({words}); --debug shows where", 1, debug=debug)
 
 
-def _fail(message: str, status: int, *, debug: bool) -> None:
+def _end(message: str, status: int, *, debug: bool = False) -> NoReturn:
     if debug:
         traceback.print_exc()
-    print("ramulus: " + " ".join(message.split()), file=sys.stderr)
-    sys.exit(status)
+    print("ramulus: " + " ".join(message.split()), file=sys.stderr)  # noqa: T201
+    raise SystemExit(status)
 
 
-def _configuration(config: Path | None, preset: str, changes: list[str] | None, spacing_um: tuple[float, float, float] | None) -> Configuration:
-    if config is not None and preset:
-        msg = f"--preset {preset}: found --config {config} too, expected one of them"
+def _request(
+    source: Path,
+    config: Path | None,
+    preset: str,
+    spacing_um: tuple[float, float, float] | None,
+    changes: list[str] | None,
+) -> tuple[Path, str, "Configuration"]:
+    """Return the input, the sample's name where a TOML gives one, and the settings."""
+    if source.suffix.lower() != ".toml":
+        return source, "", _configuration([config], preset, spacing_um, changes)
+    configuration = _configuration([config, source], preset, spacing_um, changes)
+    if not configuration.input.stack:
+        msg = f"{source}: found no input.stack, expected the file that it is about"
         raise UnusableInputError(msg)
-    path = preset_path(preset) if preset else config
-    configuration = load_configuration(path, changes=_with_spacing(changes, spacing_um))
-    if configuration.input.region and path is not None and not Path(configuration.input.region).is_absolute():
-        beside = path.parent / configuration.input.region
-        if beside.exists():
-            return with_changes(configuration, input={"region": str(beside)})
-    return configuration
+    return Path(configuration.input.stack), source.stem, configuration
 
 
-def _with_spacing(changes: list[str] | None, spacing_um: tuple[float, float, float] | None) -> list[str]:
-    changes = list(changes or [])
-    if spacing_um is not None:
-        changes.append(f"input.spacing_um=[{', '.join(map(repr, map(float, spacing_um)))}]")
-    return changes
+def _configuration(
+    files: list[Path | None],
+    preset: str,
+    spacing_um: tuple[float, float, float] | None,
+    changes: list[str] | None,
+) -> "Configuration":
+    from .config import load_configuration, preset_path
 
-
-def _closing_lines(folder: Path) -> list[str]:
-    summary = json.loads((folder / "summary.json").read_text(encoding="utf-8"))
-    lines = [
-        f"{summary['sample']}: {summary['segments']} segments, {summary['junctions']} junctions,"
-        f" {summary['loops']} loops, {summary['total_length_um'] / 1000:.4g} mm,"
-        f" median radius {summary['radius_median_um']:.4g} um, {summary['orders']} orders",
-    ]
-    hindrance = summary["network_hindrance_per_um3"]
-    if hindrance["value"] is not None:
-        interval = f" ({hindrance['low']:.4g} to {hindrance['high']:.4g})" if hindrance["low"] is not None else ""
-        lines.append(f"network hindrance {hindrance['value']:.4g} per um3{interval}")
-    exponent = summary["junction_exponent"]
-    if exponent["value"] is not None:
-        lines.append(f"junction exponent {exponent['value']:.3g} ({exponent['low']:.3g} to {exponent['high']:.3g}) from {summary['junctions_used']} junctions")
-    lines += [f"{flag['severity']}: {flag['message']}" for flag in summary["flags"]]
-    page = folder / "report.html"
-    lines.append(f"results in {folder}" + (f"; open {page}" if page.exists() else ""))
-    return lines
+    chosen = [preset_path(preset)] if preset else []
+    chosen += [file for file in files if file is not None]
+    given = [] if spacing_um is None else [f"input.spacing_um={list(map(float, spacing_um))}"]
+    return load_configuration(*chosen, changes=[*(changes or []), *given])

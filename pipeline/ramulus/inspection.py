@@ -1,49 +1,86 @@
-"""What `ramulus inspect` says of a stack, from its header alone."""
+"""What `ramulus inspect` says of an input, from its header alone."""
 
-import json
+from collections.abc import Iterator
 from pathlib import Path
 
 import numpy as np
 
 from .config import Configuration
-from .stack.open import describe
+from .errors import UnusableInputError
+from .measure import available_gib, kind_of
+from .plan import plan_of
+from .stack.open import StackReport, describe
 
-__all__ = ["expected_cost", "inspect_lines"]
-
-# Microseconds a working voxel, seconds once, bytes a working voxel and once; measured with
-# tests/benchmarks/bench_measure.py on two cores.
-_US_PER_VOXEL, _SECONDS_ONCE = 0.25, 3.0
-_BYTES_PER_VOXEL, _MIB_ONCE = 12.0, 350.0
+__all__ = ["inspect_lines"]
 
 
-def expected_cost(shape: tuple[int, int, int], spacing_um: tuple[float, float, float], itemsize: int) -> tuple[float, float]:
-    """Return the expected seconds (twin and report left out) and the expected peak memory in MiB."""
-    factors = [round(s / min(spacing_um)) if s / min(spacing_um) >= 1.8 else 1 for s in spacing_um]
-    voxels = float(np.prod([n * f for n, f in zip(shape, factors, strict=True)]))
-    seconds = _SECONDS_ONCE + voxels * _US_PER_VOXEL * 1e-6
-    return seconds, _MIB_ONCE + voxels * (_BYTES_PER_VOXEL + itemsize) / 2**20
+def inspect_lines(source: Path | str, configuration: Configuration) -> tuple[list[str], bool]:
+    """Return the lines to print, and whether the input can be measured as configured.
 
+    Parameters
+    ----------
+    source : path
+        A stack, a mask or a graph.
+    configuration : Configuration
+        As it would be measured with.
 
-def inspect_lines(source: Path, configuration: Configuration) -> tuple[list[str], bool]:
-    """Return the lines to print and whether the stack can be measured as configured."""
+    Returns
+    -------
+    tuple
+        Lines, and a bool.
+
+    Raises
+    ------
+    UnusableInputError
+        If there is nothing at the path, or its header cannot be read at all.
+    """
+    source = Path(source)
+    if not source.exists():
+        msg = f"{source}: no such file or folder"
+        raise UnusableInputError(msg)
+    if kind_of(source, configuration.input) == "graph":
+        return [f"{source}", "format    a vessel graph; it is checked when it is read"], True
     report = describe(source, settings=configuration.input)
-    lines = [
-        f"{report.path}: {report.format}, {' x '.join(map(str, report.shape))} voxels (z y x), {report.dtype}",
-    ]
+    return list(_lines(report, configuration)), _is_usable(report, configuration)
+
+
+def _lines(report: StackReport, configuration: Configuration) -> Iterator[str]:
+    yield report.path
+    yield f"format    {report.format}, {report.dtype}"
+    yield f"shape     {_product(report.shape)} voxels (z y x)"
+    yield f"channels  {', '.join(report.channels)}; time points: {report.time_points}"
+    yield from (f"header    {name}: {value}" for name, value in sorted(report.header.items()))
+    problems = list(report.problems)
     if report.spacing_um and report.spacing_origin:
-        text = ", ".join(
-            f"{axis} {size:.6g} ({origin})"
-            for axis, size, origin in zip("zyx", report.spacing_um, report.spacing_origin, strict=True)
+        axes = zip("zyx", report.spacing_um, report.spacing_origin, strict=True)
+        yield "spacing   " + ", ".join(f"{a} {um:.6g} um ({whence})" for a, um, whence in axes)
+        sizes = zip(report.shape, report.spacing_um, strict=True)
+        yield f"size      {_product(f'{n * um / 1000:.4g}' for n, um in sizes)} mm"
+        left_out = ["twin"] if configuration.twin.mode == "off" else []
+        left_out += ["report"] if configuration.report.level == "none" else []
+        plan = plan_of(
+            report.shape, report.spacing_um, np.dtype(report.dtype).itemsize, without=left_out
         )
-        size = [n * s / 1000 for n, s in zip(report.shape, report.spacing_um, strict=True)]
-        lines.append(f"spacing in um: {text}; volume {size[0]:.4g} x {size[1]:.4g} x {size[2]:.4g} mm")
-        seconds, mebibytes = expected_cost(report.shape, report.spacing_um, np.dtype(report.dtype).itemsize)
-        lines.append(f"expected: about {seconds:.0f} s (twin and report left out), {mebibytes / 1024:.2g} GiB of memory")
-        if mebibytes / 1024 > configuration.run.memory_gib:
-            lines.append(f"problem: more memory than run.memory_gib = {configuration.run.memory_gib}; measure a crop")
-    lines.append(f"channels: {', '.join(report.channels)}; time points: {report.time_points}")
-    if report.header:
-        lines.append(f"header: {json.dumps(report.header)}")
-    lines += [f"problem: {p}" for p in report.problems]
-    usable = report.spacing_um is not None and not any("channel" in p for p in report.problems)
-    return lines, usable
+        finer = "as it is" if plan.grid == report.shape else "coarse axes interpolated"
+        yield f"plan      worked on {_product(plan.grid)} voxels ({finer})"
+        yield f"expected  about {_time(plan.total_seconds)}, {plan.memory_gib:.2g} GiB of memory"
+        limit = available_gib(configuration)
+        if plan.memory_gib > limit:
+            problems.append(f"more memory than may be used ({limit:.3g} GiB): measure a crop")
+    yield from (f"problem   {problem}" for problem in problems)
+    if not problems:
+        yield "problems  none found"
+
+
+def _is_usable(report: StackReport, configuration: Configuration) -> bool:
+    channel, many = configuration.input.channel, len(report.channels)
+    chosen = channel in report.channels or (channel.isdigit() and int(channel) < many)
+    return report.spacing_um is not None and (chosen or (many == 1 and not channel))
+
+
+def _product(sizes: object) -> str:
+    return " x ".join(map(str, sizes))  # type: ignore[call-overload]
+
+
+def _time(seconds: float) -> str:
+    return f"{seconds:.0f} s" if seconds < 120 else f"{seconds / 60:.0f} min"
