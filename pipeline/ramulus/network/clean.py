@@ -1,259 +1,414 @@
 """Cleaning of the raw graph by rules without a scale of their own; every change is recorded.
 
-In this order, until nothing changes: nodes inside one inscribed ball become one; spurs go; rings
-smaller than the vessel's circumference go; series segments are joined; gaps are bridged; small parts
-go. Lengths are judged by the radius of the distance map there.
+In this order: vessels that merely touch are parted; then, until nothing changes, junctions inside
+one inscribed ball become one, rings smaller than the vessel's circumference and spurs go, series
+segments are joined; gaps are bridged and the second step is done again; small parts go. Lengths are
+judged by the distance map's radius there.
 """
 
-from collections.abc import Callable
+from collections.abc import Callable, Sequence
+from dataclasses import dataclass
 from typing import Any
 
 import numpy as np
 from scipy.sparse import coo_array
 from scipy.sparse.csgraph import connected_components
-from scipy.spatial import cKDTree
 
 from .._settings import Settings, setting
+from .bridge import facing_ends
+from .contact import touching_vessels
 from .graph import NODE_KINDS, CentrelineGraph
-from .rewire import add_segments, join_series, merge_nodes
+from .rewire import add_segments, join_series, merge_nodes, part_node
 from .trace import end_kinds
 
-__all__ = ["CleanSettings", "clean"]
+__all__ = ["CleanSettings", "Edit", "clean"]
 
+Edit = dict[str, Any]
 Sampler = Callable[[np.ndarray], np.ndarray]
+_END, _BORDER = NODE_KINDS.index("end"), NODE_KINDS.index("border")
+_ROUNDS = 50
 
 
 class CleanSettings(Settings):
     """Settings of the cleaning."""
 
+    merge_radii: float = setting(
+        1.0,
+        "junctions closer along their segment than this many radii of the wider inscribed ball "
+        "become one; 0: none",
+        unit="radii",
+        ge=0,
+        source="both lie inside one inscribed ball",
+    )
     spur_protrusion: float = setting(
-        1.0, "a free end counts as a vessel from this protrusion beyond the parent's wall, in parent's"
-        " radii", unit="radii", ge=0, source="judgement; the report shows how many fall to it",
-    )  # fmt: skip
+        1.0,
+        "a free end counts as a vessel from this protrusion beyond the parent's inscribed ball, in "
+        "the ball's radii",
+        unit="radii",
+        ge=0,
+        source="common practice, no source; the report shows how many fall to it",
+    )
+    spur_voxels: float = setting(
+        2.0,
+        "and from this protrusion in voxel edges of the stack along its direction",
+        unit="voxels",
+        ge=0,
+        source="own phantom study: bumps of one slice in anisotropic, noisy stacks",
+    )
     part_length_diameters: float = setting(
-        3.0, "a part shorter than this many of its own diameters is removed", unit="diameters", ge=0
+        3.0,
+        "a part shorter than this many of its own diameters is removed",
+        unit="diameters",
+        ge=0,
+        source="common practice, no source",
     )
     part_length_share: float = setting(
         0.0, "a part shorter than this share of the largest part's length is removed", ge=0, lt=1
     )
     bridge_radii: float = setting(
-        4.0, "longest gap that is bridged, in the sum of both ends' radii; 0: none", unit="radii", ge=0
+        4.0,
+        "longest gap that is bridged, in the sum of both ends' radii; 0: none",
+        unit="radii",
+        ge=0,
     )
     bridge_angle_deg: float = setting(
         45.0, "largest angle between either end's axis and the bridge", unit="deg", gt=0, le=90
     )
+    bridge_radius_ratio: float = setting(
+        2.0, "largest ratio of the two ends' radii", ge=1, source="common practice, no source"
+    )
     bridge_grey: float = setting(
         0.3, "smallest mean grey value along a bridge, as a share of the ends' contrast", ge=0, le=1
+    )
+    contact_neck: float = setting(
+        0.7,
+        "touching vessels are parted where the neck between them is narrower than this share of "
+        "the thinner one's radius; 0: never",
+        ge=0,
+        le=1,
+        source="common practice, no source",
+    )
+    contact_angle_deg: float = setting(
+        150.0,
+        "and each of them runs on straighter than this",
+        unit="deg",
+        ge=90,
+        le=180,
+        source="common practice, no source",
     )
 
 
 def clean(
-    graph: CentrelineGraph, *, settings: CleanSettings, contrast_at: Sampler | None = None
-) -> tuple[CentrelineGraph, list[dict[str, Any]]]:
+    graph: CentrelineGraph,
+    *,
+    settings: CleanSettings | None = None,
+    contrast_at: Sampler | None = None,
+    origin_um: Sequence[float] = (0.0, 0.0, 0.0),
+) -> tuple[CentrelineGraph, list[Edit]]:
     """Return the cleaned graph and the list of automatic edits.
 
     Parameters
     ----------
     graph : CentrelineGraph
-        As traced, with `point_radius_map_um`.
+        As traced, with `point_radius_map_um`, `spacing_um` and `extent_um`.
+    settings : CleanSettings, optional
+        The rules' limits.
     contrast_at : callable, optional
         Takes (k, 3) positions in um and returns the grey values over the background there; without
-        it gaps are judged by geometry alone.
+        it gaps and contacts are judged by geometry alone.
+    origin_um : sequence of float
+        Centre of the volume's first voxel.
 
     Returns
     -------
     tuple
-        Graph; edits as dictionaries with `op`, `position_um`, `reason`, `author`.
+        The graph, and the edits in the order in which they were made: dictionaries with `op`
+        (merge, remove, join, split), `step` (contact, ball, ring, spur, gap, part), `position_um`,
+        `reason`, `author` (auto) and the lengths and radii that decided.
+
+    Examples
+    --------
+    >>> trunk = np.array([[0, 9, x] for x in range(41)])
+    >>> spur = np.array([[0, 9, 20], [0, 13, 20]])
+    >>> lines = [trunk[:21], trunk[20:], spur]
+    >>> graph = CentrelineGraph.from_polylines(
+    ...     [trunk[0], trunk[20], trunk[40], spur[1]], [[0, 1], [1, 2], [1, 3]], lines,
+    ...     point_radius_map_um=np.full(44, 3.0), spacing_um=(1, 1, 1),
+    ... )
+    >>> cleaned, edits = clean(graph)
+    >>> cleaned.n_segments, [(edit["op"], edit["step"]) for edit in edits]
+    (1, [('remove', 'spur')])
     """
-    edits: list[dict[str, Any]] = []
-    graph = _until_stable(graph, settings, edits)
-    if settings.bridge_radii > 0:
-        bridged = _bridged(graph, settings, contrast_at, edits)
-        if bridged.n_segments != graph.n_segments:
-            graph = _until_stable(bridged, settings, edits)
-    graph = _without_small_parts(graph, settings, edits)
-    return graph.replace(node_kind=end_kinds(graph, margin_um=_margin(graph))), edits
+    work = _Work(graph, settings or CleanSettings(), contrast_at, origin_um, [])
+    work.part_contacts()
+    work.settle()
+    if work.bridge_gaps():
+        work.settle()
+    work.drop_small_parts()
+    work.name_ends()
+    return work.graph, work.edits
 
 
-def _until_stable(graph: CentrelineGraph, settings: CleanSettings, edits: list[dict[str, Any]]) -> CentrelineGraph:
-    graph = join_series(graph)
-    for _ in range(30):
-        before = graph.n_segments
-        graph = _merged(graph, edits)
-        graph = _without_small_rings(graph, edits)
-        graph = join_series(graph)
-        graph = graph.replace(node_kind=end_kinds(graph, margin_um=_margin(graph)))
-        graph = join_series(_without_spurs(graph, settings, edits))
-        if graph.n_segments == before:
-            break
-    return graph
+@dataclass(slots=True)
+class _Work:
+    """The graph on its way through the steps, and the edits so far."""
+
+    graph: CentrelineGraph
+    settings: CleanSettings
+    contrast_at: Sampler | None
+    origin_um: Sequence[float]
+    edits: list[Edit]
+
+    def part_contacts(self) -> None:
+        """Part vessels that run past one another and only touch."""
+        s = self.settings
+        self.graph = join_series(self.graph)
+        if s.contact_neck <= 0:
+            return
+        found = touching_vessels(
+            self.graph, neck=s.contact_neck, angle_deg=s.contact_angle_deg,
+            contrast_at=self.contrast_at,
+        )  # fmt: skip
+        for contact in found:
+            self.note("split", "contact", contact.position_um, contact.reason)
+        drop = np.zeros(self.graph.n_segments, dtype=bool)
+        drop[[c.segment for c in found if c.segment >= 0]] = True
+        for contact in found:
+            if contact.segment < 0:
+                self.graph = part_node(
+                    self.graph, contact.node, contact.other_ends, contact.other_um
+                )
+        self.graph = join_series(self.graph.select_segments(~drop))
+
+    def settle(self) -> None:
+        """Merge junctions, drop rings and spurs and join series until nothing changes."""
+        for _ in range(_ROUNDS):
+            before = self.graph.n_segments
+            if not before:
+                return
+            self.merge_inside_balls()
+            self.drop_small_rings()
+            self.graph = join_series(self.graph)
+            self.name_ends()
+            self.drop_spurs()
+            self.graph = join_series(self.graph)
+            if self.graph.n_segments == before:
+                return
+
+    def merge_inside_balls(self) -> None:
+        """Make junctions one whose segment lies inside the inscribed ball of either.
+
+        Shortest first: a segment is contracted when no shorter one waits at its two nodes, and the
+        rest is judged again. Contracting a segment opens and closes no loop.
+        """
+        while True:
+            graph = self.graph
+            a, b = graph.segment_nodes.T
+            radius, degree = _node_radius_um(graph), graph.node_degree()
+            length = graph.segment_length_um()
+            ball = np.maximum(radius[a], radius[b])
+            short = (degree[a] >= 3) & (degree[b] >= 3) & (a != b)
+            short &= length < self.settings.merge_radii * ball
+            if not short.any():
+                return
+            chosen = _first_at_both_nodes(graph, short, length)
+            for k in np.flatnonzero(chosen):
+                self.note(
+                    "merge", "ball", graph.node_position_um[a[k]],
+                    "two junctions inside one inscribed ball",
+                    length_um=length[k], radius_um=ball[k],
+                )  # fmt: skip
+            group = np.arange(graph.n_nodes)
+            group[b[chosen]] = a[chosen]
+            _, group = np.unique(group, return_inverse=True)
+            self.graph = merge_nodes(graph, group, np.maximum(radius, 1e-9), chosen)
+
+    def drop_small_rings(self) -> None:
+        """Drop one side of every ring shorter than the vessel's circumference there."""
+        graph = self.graph
+        length, radius = graph.segment_length_um(), _node_radius_um(graph)
+        a, b = np.sort(graph.segment_nodes, axis=1).T
+        circumference = 2 * np.pi * np.maximum(radius[a], radius[b])
+        drop = (a == b) & (length < circumference)
+        # Of two segments between the same nodes the thinner one goes, of equal ones the longer.
+        order = np.lexsort((length, -_mean_radius_um(graph), b, a))
+        first, second = order[:-1], order[1:]
+        pair = (a[first] == a[second]) & (b[first] == b[second]) & (a[first] != b[first])
+        small = pair & (length[first] + length[second] < circumference[first])
+        drop[second[small]] = True
+        for k in np.flatnonzero(drop):
+            self.note(
+                "remove", "ring", _middle_um(graph, int(k)), "ring shorter than the circumference",
+                length_um=length[k], radius_um=circumference[k] / (2 * np.pi),
+            )  # fmt: skip
+        self.graph = graph.select_segments(~drop) if drop.any() else graph
+
+    def drop_spurs(self) -> None:
+        """Drop free ends that hardly leave their parent; at each junction the least one first.
+
+        An end that a face cuts stays unless it does not leave the parent's ball at all.
+        """
+        graph = self.graph
+        base, tip, side = _base_and_tip(graph)
+        free = (base >= 0) & (graph.node_kind[tip] == _END)
+        cut = (base >= 0) & (graph.node_kind[tip] == _BORDER)
+        radius = _node_radius_um(graph)
+        protrusion = graph.segment_length_um() + radius[tip] - radius[base]
+        spur = free & (protrusion < self._least_protrusion_um(base, tip, side, radius))
+        spur |= cut & (protrusion - radius[tip] < 0)
+        score = np.where(spur, protrusion / np.maximum(radius[base], 1e-9), np.inf)
+        order = np.lexsort((np.arange(len(score)), score, base))
+        leading = np.append(True, np.diff(base[order]) != 0)[: len(order)]
+        drop = np.zeros(graph.n_segments, dtype=bool)
+        drop[order[leading]] = True
+        drop &= spur
+        for k in np.flatnonzero(drop):
+            self.note(
+                "remove", "spur", graph.node_position_um[tip[k]],
+                "spur that hardly leaves its parent",
+                length_um=graph.segment_length_um()[k], radius_um=radius[base[k]],
+            )  # fmt: skip
+        self.graph = graph.select_segments(~drop) if drop.any() else graph
+
+    def _least_protrusion_um(
+        self, base: np.ndarray, tip: np.ndarray, side: np.ndarray, radius_um: np.ndarray
+    ) -> np.ndarray:
+        """Return what a free end needs: by the parent, by itself if as wide, and by the voxels."""
+        graph = self.graph
+        own = _radius_beyond_um(graph, side, radius_um[base])
+        least = self.settings.spur_protrusion * radius_um[base]
+        least = np.where(own > 0.8 * radius_um[base], np.maximum(least, 2.0 * own), least)
+        along = graph.node_position_um[tip] - graph.node_position_um[base]
+        along /= np.maximum(np.linalg.norm(along, axis=1, keepdims=True), 1e-12)
+        edge = np.linalg.norm(along * np.array(graph.spacing_um), axis=1)
+        needed: np.ndarray = np.maximum(least, self.settings.spur_voxels * edge)
+        return needed
+
+    def bridge_gaps(self) -> bool:
+        """Join facing free ends across short gaps; return whether any were found."""
+        s, graph = self.settings, self.graph
+        if s.bridge_radii <= 0:
+            return False
+        gaps = facing_ends(
+            graph, radii=s.bridge_radii, angle_deg=s.bridge_angle_deg,
+            radius_ratio=s.bridge_radius_ratio, grey=s.bridge_grey, contrast_at=self.contrast_at,
+        )  # fmt: skip
+        for gap in gaps:
+            self.note(
+                "join", "gap", graph.node_position_um[list(gap.ends)].mean(axis=0), gap.reason,
+                length_um=gap.length_um, radius_um=gap.radius_um,
+            )  # fmt: skip
+        if gaps:
+            pairs = np.array([gap.ends for gap in gaps], dtype=np.int64)
+            self.graph = add_segments(graph, pairs, "bridged gap")
+        return bool(gaps)
+
+    def drop_small_parts(self) -> None:
+        """Drop components too short for their own diameter; the longest always stays.
+
+        A part that two faces cut is a vessel that crosses a corner of the volume, and stays.
+        """
+        graph, s = self.graph, self.settings
+        part, count = _parts(graph)
+        lengths = graph.segment_length_um()
+        first = graph.segment_nodes[:, 0]
+        length = np.bincount(part[first], lengths, count)
+        weighted = np.bincount(part[first], lengths * _mean_radius_um(graph), count)
+        radius = weighted / np.maximum(length, 1e-12)
+        crossing = np.bincount(part, graph.node_kind == _BORDER, count) >= 2
+        small = ~crossing & (length < 2 * s.part_length_diameters * radius)
+        small |= (length <= 0) | (length < s.part_length_share * length.max(initial=0.0))
+        if length.any():
+            small[np.argmax(length)] = False
+        places = graph.node_position_um[np.unique(part, return_index=True)[1]]
+        for k in np.flatnonzero(small):
+            self.note(
+                "remove", "part", places[k], "part too short for its own diameter",
+                length_um=length[k], radius_um=radius[k],
+            )  # fmt: skip
+        if small.any():
+            self.graph = graph.select_segments(~small[part[first]])
+
+    def name_ends(self) -> None:
+        """Tell junctions, blind ends and ends cut by a face apart again."""
+        margin_um = max(self.graph.spacing_um)
+        kind = end_kinds(self.graph, margin_um=margin_um, origin_um=self.origin_um)
+        self.graph = self.graph.replace(node_kind=kind)
+
+    def note(
+        self, op: str, step: str, position_um: np.ndarray, reason: str, **sizes_um: float
+    ) -> None:
+        """Record one edit."""
+        place = [round(float(v), 4) for v in position_um]
+        sizes = {name: round(float(value), 4) for name, value in sizes_um.items()}
+        edit = {"op": op, "step": step, "position_um": place, "reason": reason, "author": "auto"}
+        self.edits.append(edit | sizes)
 
 
-def _margin(graph: CentrelineGraph) -> float:
-    return max(graph.spacing_um)
-
-
-def _node_radius(graph: CentrelineGraph) -> np.ndarray:
-    """(n,) widest map radius of the segments at each node, near it."""
+def _node_radius_um(graph: CentrelineGraph) -> np.ndarray:
+    """Return the widest map radius of the segments at each node, right at it."""
     widest = np.zeros(graph.n_nodes)
-    for side, at in ((0, graph.point_offsets[:-1]), (1, graph.point_offsets[1:] - 1)):
-        np.maximum.at(widest, graph.segment_nodes[:, side], np.nan_to_num(graph.point_radius_map_um[at]))
+    for side, end in ((0, graph.point_offsets[:-1]), (1, graph.point_offsets[1:] - 1)):
+        radius = np.nan_to_num(graph.point_radius_map_um[end])
+        np.maximum.at(widest, graph.segment_nodes[:, side], radius)
     return widest
 
 
-def _merged(graph: CentrelineGraph, edits: list[dict[str, Any]]) -> CentrelineGraph:
-    """Junctions whose segment lies inside one inscribed ball are one junction."""
-    radius, degree = _node_radius(graph), graph.node_degree()
-    a, b = graph.segment_nodes.T
-    chord = np.linalg.norm(graph.node_position_um[a] - graph.node_position_um[b], axis=1)
-    length = graph.segment_length_um()
-    ball = np.maximum(radius[a], radius[b])
-    short = (degree[a] >= 3) & (degree[b] >= 3) & (a != b) & (chord < ball) & (length < 1.5 * ball)
-    if not short.any():
-        return graph
-    n = graph.n_nodes
-    _, group = connected_components(coo_array((np.ones(short.sum()), (a[short], b[short])), (n, n)), directed=False)
-    for k in np.flatnonzero(short).tolist():
-        edits.append(_edit("merge", graph.node_position_um[a[k]], "two junctions inside one inscribed ball"))
-    return merge_nodes(graph, group, np.maximum(radius, 1e-9), short)
-
-
-def _without_small_rings(graph: CentrelineGraph, edits: list[dict[str, Any]]) -> CentrelineGraph:
-    """Rings shorter than the circumference of the vessel there are dents of the mask."""
-    length, radius = graph.segment_length_um(), _node_radius(graph)
-    a, b = np.sort(graph.segment_nodes, axis=1).T
-    ring = (a == b) & (length < 2 * np.pi * radius[a])
-    order = np.lexsort((length, b, a))
-    same = (a[order][1:] == a[order][:-1]) & (b[order][1:] == b[order][:-1]) & (a[order][1:] != b[order][1:])
-    first, second = order[:-1][same], order[1:][same]
-    small = length[first] + length[second] < 2 * np.pi * np.minimum(radius[a[first]], radius[b[first]])
-    drop = ring.copy()
-    drop[second[small]] = True
-    if not drop.any():
-        return graph
-    middle = graph.point_position_um[(graph.point_offsets[:-1] + graph.point_offsets[1:]) // 2]
-    for k in np.flatnonzero(drop).tolist():
-        edits.append(_edit("remove", middle[k], "ring shorter than the vessel's circumference"))
-    return graph.select_segments(~drop)
-
-
-def _without_spurs(graph: CentrelineGraph, settings: CleanSettings, edits: list[dict[str, Any]]) -> CentrelineGraph:
-    """Remove free ends that hardly leave their parent; at each junction the shortest first."""
-    degree, radius = graph.node_degree(), _node_radius(graph)
-    length = graph.segment_length_um()
-    end = (graph.node_kind == NODE_KINDS.index("end")) & (degree == 1)
-    border = (graph.node_kind == NODE_KINDS.index("border")) & (degree == 1)
-    a, b = graph.segment_nodes.T
-    free = (end[a] & (degree[b] >= 3)) | (end[b] & (degree[a] >= 3))
-    cut = (border[a] & (degree[b] >= 3)) | (border[b] & (degree[a] >= 3))
-    base = np.where(degree[a] >= 3, a, b)
-    tip = np.where(degree[a] >= 3, b, a)
-    protrusion = length - radius[base]
-    limit = settings.spur_protrusion * radius[base]
-    stubby = radius[tip] > 0.8 * radius[base]
-    limit = np.where(stubby, np.maximum(limit, 2.0 * radius[tip]), limit)
-    # A vessel that a face cuts close to its junction stays unless it does not leave the parent at all.
-    spur = (free & (protrusion < limit)) | (cut & (protrusion < 0))
-    if not spur.any():
-        return graph
-    score = np.where(spur, protrusion / np.maximum(radius[base], 1e-9), np.inf)
-    order = np.lexsort((np.arange(len(score)), score, base))
-    leading = np.r_[True, base[order][1:] != base[order][:-1]]
-    drop = np.zeros(graph.n_segments, bool)
-    drop[order[leading]] = True
-    drop &= spur
-    for k in np.flatnonzero(drop).tolist():
-        edits.append(_edit("remove", graph.node_position_um[tip[k]], "spur shorter than the parent's radius allows"))
-    return graph.select_segments(~drop)
-
-
-def _bridged(graph, settings, contrast_at, edits):  # noqa: ANN001, ANN202
-    """Join facing free ends across short gaps, best pairs first, each end once."""
-    degree = graph.node_degree()
-    ends = np.flatnonzero((degree == 1) & (graph.node_kind == NODE_KINDS.index("end")))
-    if len(ends) < 2:
-        return graph
-    radius, outward, segment = _end_geometry(graph)
-    widest = float(radius[ends].max())
-    pairs = cKDTree(graph.node_position_um[ends]).query_pairs(2 * settings.bridge_radii * widest, output_type="ndarray")
-    if not len(pairs):
-        return graph
-    i, j = ends[pairs[:, 0]], ends[pairs[:, 1]]
-    gap = graph.node_position_um[j] - graph.node_position_um[i]
-    distance = np.linalg.norm(gap, axis=1)
-    gap /= np.maximum(distance, 1e-9)[:, None]
-    near = distance <= settings.bridge_radii * (radius[i] + radius[j])
-    limit = np.cos(np.radians(settings.bridge_angle_deg))
-    cos_i, cos_j = (outward[i] * gap).sum(1), -(outward[j] * gap).sum(1)
-    # Over a very short gap the axes are uncertain: half the distance of one radius is forgiven.
-    close = distance <= 0.75 * (radius[i] + radius[j])
-    facing = ((cos_i >= limit) & (cos_j >= limit)) | (close & (cos_i > 0) & (cos_j > 0))
-    similar = np.maximum(radius[i], radius[j]) <= 2.0 * np.minimum(radius[i], radius[j])
-    chosen = np.flatnonzero(near & facing & similar & (segment[i] != segment[j]))
-    if contrast_at is not None and len(chosen):
-        chosen = chosen[_bright(graph, i[chosen], j[chosen], contrast_at, settings.bridge_grey)]
-    if not len(chosen):
-        return graph
-    cost = distance[chosen] / (radius[i[chosen]] + radius[j[chosen]]) + 2 - cos_i[chosen] - cos_j[chosen]
-    used, accepted = set(), []
-    for k in chosen[np.argsort(cost, kind="stable")].tolist():
-        a, b = int(i[k]), int(j[k])
-        if a in used or b in used:
-            continue
-        used |= {a, b}
-        accepted.append((a, b))
-        edits.append(_edit(
-            "join", 0.5 * (graph.node_position_um[a] + graph.node_position_um[b]),
-            f"gap of {distance[k]:.4g} um between facing ends",
-        ))  # fmt: skip
-    return add_segments(graph, np.array(accepted, dtype=np.int64), "bridged gap")
-
-
-def _end_geometry(graph: CentrelineGraph) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
-    """(n,) radius, (n, 3) outward axis and (n,) segment at each free end, over the last few radii."""
-    radius, outward = np.zeros(graph.n_nodes), np.zeros((graph.n_nodes, 3))
-    segment = np.full(graph.n_nodes, -1)
+def _mean_radius_um(graph: CentrelineGraph) -> np.ndarray:
+    """Return the length-weighted mean map radius of each segment."""
     weight = graph.point_weight_um()
-    mean = graph.segment_sum(weight * np.nan_to_num(graph.point_radius_map_um)) / np.maximum(graph.segment_sum(weight), 1e-12)
-    step = np.maximum(graph.segment_length_um() / np.maximum(graph.points_per_segment - 1, 1), 1e-9)
-    reach = np.clip(np.ceil(4 * mean / step).astype(int), 2, np.maximum(graph.points_per_segment - 1, 1))
-    for side, at, direction in ((0, graph.point_offsets[:-1], 1), (1, graph.point_offsets[1:] - 1, -1)):
-        node = graph.segment_nodes[:, side]
-        axis = graph.point_position_um[at] - graph.point_position_um[at + direction * reach]
-        axis /= np.maximum(np.linalg.norm(axis, axis=1), 1e-12)[:, None]
-        outward[node], radius[node], segment[node] = axis, mean, np.arange(graph.n_segments)
-    return radius, outward, segment
+    total = graph.segment_sum(weight * np.nan_to_num(graph.point_radius_map_um))
+    mean: np.ndarray = total / np.maximum(graph.segment_sum(weight), 1e-12)
+    return mean
 
 
-def _bright(graph, i, j, contrast_at, share):  # noqa: ANN001, ANN202
-    f = np.linspace(0, 1, 9)[:, None, None]
-    line = graph.node_position_um[i] * (1 - f) + graph.node_position_um[j] * f
-    grey = contrast_at(line.reshape(-1, 3)).reshape(9, -1)
-    ends = np.minimum(grey[0], grey[-1])
-    return grey[2:-2].mean(axis=0) >= share * np.maximum(ends, 1e-12)
+def _first_at_both_nodes(
+    graph: CentrelineGraph, candidate: np.ndarray, length: np.ndarray
+) -> np.ndarray:
+    """Return the candidates that are the shortest candidate at both of their nodes."""
+    order = np.lexsort((np.arange(len(length)), length))
+    rank = np.empty(len(length), dtype=np.int64)
+    rank[order] = np.arange(len(length))
+    best = np.full(graph.n_nodes, len(length))
+    for side in (0, 1):
+        np.minimum.at(best, graph.segment_nodes[candidate, side], rank[candidate])
+    at_nodes = best[graph.segment_nodes]
+    first: np.ndarray = candidate & (at_nodes == rank[:, None]).all(axis=1)
+    return first
 
 
-def _without_small_parts(graph: CentrelineGraph, settings: CleanSettings, edits: list[dict[str, Any]]) -> CentrelineGraph:
+def _base_and_tip(graph: CentrelineGraph) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
+    """Return each segment's junction and free end, and which end is the junction; base -1: none."""
+    degree = graph.node_degree()[graph.segment_nodes]
+    side = np.where(degree[:, 1] == 1, 0, 1)
+    rows = np.arange(graph.n_segments)
+    has_base = (degree[rows, side] >= 3) & (degree[rows, 1 - side] == 1)
+    base = np.where(has_base, graph.segment_nodes[rows, side], -1)
+    return base, graph.segment_nodes[rows, 1 - side], side
+
+
+def _radius_beyond_um(graph: CentrelineGraph, side: np.ndarray, reach_um: np.ndarray) -> np.ndarray:
+    """Return each segment's widest map radius further than `reach_um` from one end; 0: nothing."""
+    counts = graph.points_per_segment
+    arc_um = graph.arc_um()
+    length = np.repeat(graph.segment_length_um(), counts)
+    from_end = np.where(np.repeat(side, counts) == 0, arc_um, length - arc_um)
+    radius = np.where(
+        from_end > np.repeat(reach_um, counts), np.nan_to_num(graph.point_radius_map_um), 0.0
+    )
+    widest: np.ndarray = np.maximum.reduceat(radius, graph.point_offsets[:-1])
+    return widest
+
+
+def _middle_um(graph: CentrelineGraph, segment: int) -> np.ndarray:
+    points = graph.points_of(segment)
+    middle: np.ndarray = graph.point_position_um[(points.start + points.stop) // 2]
+    return middle
+
+
+def _parts(graph: CentrelineGraph) -> tuple[np.ndarray, int]:
+    """Return the component of each node, and how many there are."""
     n = graph.n_nodes
     a, b = graph.segment_nodes.T
-    _, part = connected_components(coo_array((np.ones(len(a)), (a, b)), (n, n)), directed=False)
-    length = np.bincount(part[a], weights=graph.segment_length_um(), minlength=part.max() + 1)
-    radius = np.zeros(len(length))
-    np.maximum.at(radius, part, _node_radius(graph))
-    small = length < 2 * settings.part_length_diameters * radius
-    small |= length < settings.part_length_share * length.max()
-    small[np.argmax(length)] = False
-    drop = small[part[a]]
-    if not drop.any():
-        return graph
-    for p in np.flatnonzero(small).tolist():
-        node = int(np.flatnonzero(part == p)[0])
-        edits.append(_edit("remove", graph.node_position_um[node], "part shorter than its own diameters allow"))
-    return graph.select_segments(~drop)
-
-
-def _edit(op: str, position_um: np.ndarray, reason: str) -> dict[str, Any]:
-    return {
-        "op": op, "position_um": [round(float(v), 4) for v in position_um], "reason": reason,
-        "author": "auto",
-    }  # fmt: skip
+    count, part = connected_components(coo_array((np.ones(len(a)), (a, b)), shape=(n, n)))
+    return part, int(count)

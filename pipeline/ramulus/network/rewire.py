@@ -1,11 +1,14 @@
-"""Elementary changes of a graph's wiring: drop segments, join series, merge nodes."""
+"""Elementary changes of a graph's wiring: join series, merge and part nodes, add segments."""
+
+from collections.abc import Sequence
 
 import numpy as np
 
+from ..errors import UnusableInputError
 from . import _clean_kernels as kernels
 from .graph import CentrelineGraph
 
-__all__ = ["add_segments", "join_series", "merge_nodes"]
+__all__ = ["add_segments", "join_series", "merge_nodes", "part_node"]
 
 _POINTS = (
     "point_position_um", "point_radius_um", "point_radius_se_um", "point_radius_common_um",
@@ -49,10 +52,9 @@ def join_series(graph: CentrelineGraph, keep: np.ndarray | None = None) -> Centr
     take = np.arange(ends_of[-1]) + np.repeat(starts - (ends_of - counts), counts)
     point_offsets = np.concatenate(([0], ends_of[offsets[1:] - 1]))
     resolved = np.logical_and.reduceat(graph.segment_resolved[chain], offsets[:-1])
-    review = np.array(
-        [_joined(graph.segment_review[chain[a:b]]) for a, b in zip(offsets[:-1], offsets[1:], strict=True)],
-        dtype=object,
-    )
+    review = graph.segment_review[chain[offsets[:-1]]]
+    for k in np.flatnonzero(np.logical_or.reduceat(graph.segment_review[chain] != "", offsets[:-1])):
+        review[k] = _joined(graph.segment_review[chain[offsets[k] : offsets[k + 1]]])
     joined = graph.replace(
         segment_nodes=nodes[:n].copy(), point_offsets=point_offsets.astype(np.int64),
         segment_resolved=resolved, segment_review=review,
@@ -89,6 +91,48 @@ def merge_nodes(graph: CentrelineGraph, group: np.ndarray, weight: np.ndarray, d
         point_position_um=points,
     )  # fmt: skip
     return merged.select_segments(~drop)
+
+
+def part_node(
+    graph: CentrelineGraph, node: int, ends: Sequence[tuple[int, int]], place_um: np.ndarray
+) -> CentrelineGraph:
+    """Return the graph with some segment ends of a node moved to a new node.
+
+    Parameters
+    ----------
+    graph : CentrelineGraph
+        The graph.
+    node : int
+        The node that keeps its other ends.
+    ends : sequence of (int, int)
+        The (segment, side) ends that go to the new node, which comes last.
+    place_um : (3,) array
+        Position of the new node.
+
+    Returns
+    -------
+    CentrelineGraph
+        With one node more.
+
+    Raises
+    ------
+    UnusableInputError
+        If an end is not at the node.
+    """
+    segment_nodes, points_um = graph.segment_nodes.copy(), graph.point_position_um.copy()
+    for segment, side in ends:
+        if segment_nodes[segment, side] != node:
+            found = int(segment_nodes[segment, side])
+            msg = f"ends: segment {segment} has node {found} at side {side}, expected {node}"
+            raise UnusableInputError(msg)
+        segment_nodes[segment, side] = graph.n_nodes
+        points = graph.points_of(segment)
+        points_um[points.start if side == 0 else points.stop - 1] = place_um
+    return graph.replace(
+        node_position_um=np.concatenate((graph.node_position_um, place_um[None])),
+        node_kind=np.append(graph.node_kind, graph.node_kind[node]),
+        segment_nodes=segment_nodes, point_position_um=points_um,
+    )  # fmt: skip
 
 
 def add_segments(graph: CentrelineGraph, pairs: np.ndarray, review: str) -> CentrelineGraph:
