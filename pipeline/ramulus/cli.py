@@ -133,6 +133,52 @@ def inspect_command(
         raise typer.Exit(UnusableInputError.exit_status)
 
 
+@app.command("cohort")
+def cohort_command(
+    manifest: Annotated[
+        Path,
+        typer.Argument(
+            metavar="MANIFEST.csv",
+            help="A row a sample: sample, stack, and where known subject, group, batch, config,"
+            " edits; other columns are carried through.",
+        ),
+    ],
+    out: Out,
+    workers: Annotated[
+        int, typer.Option("--workers", min=1, help="Samples measured at a time.")
+    ] = 1,
+    scheduler: Annotated[
+        str,
+        typer.Option(
+            "--scheduler", metavar="ADDRESS", help="A dask scheduler whose workers measure them."
+        ),
+    ] = "",
+    config: Config = None,
+    preset: Preset = "",
+    spacing_um: Spacing = None,
+    changes: Changes = None,
+    quiet: Quiet = False,
+    log: Log = None,
+    debug: Debug = False,
+) -> None:
+    """Measure every sample of a manifest, compare the groups, and report.
+
+    All rows are checked first. A sample that fails is a row with its reason; the others go on. A
+    run that was stopped is taken up by running the same line again.
+
+    Example: ramulus cohort study.csv --out results --workers 4 --config study.toml
+    """
+    with _session(quiet, log, debug) as reporter:
+        from .cohort.measured import closing_lines, measure_cohort
+
+        files, given = _settings([config], preset, spacing_um, changes)
+        results = measure_cohort(
+            manifest, out, files=files, changes=given, workers=workers, scheduler=scheduler,
+            on_progress=lambda told: reporter(told.words, told.done / told.total),
+        )  # fmt: skip
+        reporter.done(closing_lines(results, out))
+
+
 @app.command("phantom")
 def phantom_command(
     out: Annotated[
@@ -279,9 +325,22 @@ def _configuration(
     spacing_um: tuple[float, float, float] | None,
     changes: list[str] | None,
 ) -> "Configuration":
-    from .config import load_configuration, preset_path
+    from .config import load_configuration
+
+    chosen, given = _settings(files, preset, spacing_um, changes)
+    return load_configuration(*chosen, changes=given)
+
+
+def _settings(
+    files: list[Path | None],
+    preset: str,
+    spacing_um: tuple[float, float, float] | None,
+    changes: list[str] | None,
+) -> tuple[list[Path], list[str]]:
+    """Return the files in the order in which they are laid over one another, and the changes."""
+    from .config import preset_path
 
     chosen = [preset_path(preset)] if preset else []
     chosen += [file for file in files if file is not None]
     given = [] if spacing_um is None else [f"input.spacing_um={list(map(float, spacing_um))}"]
-    return load_configuration(*chosen, changes=[*(changes or []), *given])
+    return chosen, [*(changes or []), *given]

@@ -34,7 +34,7 @@ from .image.mask import Mask, Skeleton
 from .image.segment import Segmented
 from .line import Results, analyse, analyse_graph, analyse_mask
 from .network.gauge import Blur, Gauged
-from .network.graph import CentrelineGraph
+from .network.graph import NODE_KINDS, CentrelineGraph
 from .network.swc import read_swc
 from .network.tables import read_folder
 from .outputs import judged, plain_json, sample_files, write_mask
@@ -43,9 +43,10 @@ from .report.page import write_report
 from .stack.open import InputSettings, open_stack, sample_name
 from .stack.slices import slice_files
 from .stack.stack import Stack
+from .tree.root import RootSettings
 from .trust.twin import Twin, run_twin
 
-__all__ = ["Progress", "available_gib", "kind_of", "measure"]
+__all__ = ["Progress", "available_gib", "code_sha256", "kind_of", "measure"]
 
 Progress = Callable[[str, float], None]
 """Is told each stage as it begins, and the share of the expected time that lies before it."""
@@ -159,7 +160,7 @@ class _Subject:
     @property
     def key(self) -> str:
         """What every stage depends on: the input's bytes, how they are read, and the program."""
-        parts: list[Any] = [_code_sha256(), *_versions().values()]
+        parts: list[Any] = [code_sha256(), *_versions().values()]
         parts += [self.kind, self.sha256, self.region_sha256]
         if isinstance(self.data, Stack):
             origin = self.data.provenance
@@ -221,10 +222,7 @@ def _opened(source: Path, configuration: Configuration, name: str) -> _Subject:
            "report": configuration.report.level == "none"}  # fmt: skip
     without = [stage for stage, left_out in off.items() if left_out]
     if kind == "graph":
-        folder = source.is_dir()
-        graph = read_folder(source) if folder else read_swc(source, unit=settings.graph_unit)
-        digests = [sha256_of(source / f) for f in _GRAPH_FILES] if folder else [sha256_of(source)]
-        digest = digests[0] if len(digests) == 1 else chained_key("", *digests)
+        graph, digest = _read_graph(source, configuration)
         without += [
             "read",
             "grid",
@@ -322,7 +320,7 @@ def _record(
     peak = resource.getrusage(resource.RUSAGE_SELF).ru_maxrss
     seconds = {name: round(value, 3) for name, value in stages.seconds.items()}
     record = {
-        "sample": subject.name, "ramulus": __version__, "code_sha256": _code_sha256(),
+        "sample": subject.name, "ramulus": __version__, "code_sha256": code_sha256(),
         "python": platform.python_version(), "libraries": _versions(),
         "input": subject.file, "input_kind": subject.kind, "input_sha256": subject.sha256,
         "region_sha256": subject.region_sha256, "seed": configuration.twin.seed,
@@ -384,7 +382,7 @@ def _state(source: Path) -> tuple[tuple[int, int], ...]:
 
 
 @cache
-def _code_sha256() -> str:
+def code_sha256() -> str:
     """Return the checksum of the package's source, so that no other code's values are taken."""
     digest = hashlib.sha256()
     for file in sorted(Path(__file__).parent.rglob("*.py")):

@@ -16,8 +16,8 @@ import pytest
 
 from ramulus import UnusableInputError
 from ramulus._cohort_settings import CohortSettings
+from ramulus._folder import is_finished
 from ramulus.cohort.cohort import checked_cohort, run_cohort, sample_folder
-from ramulus.cohort.run import has_valid_run
 
 SETTINGS = CohortSettings(primary_figures=("junction_exponent",))
 FILES = ["cohort.csv", "cohort.html", "comparisons.csv", "failures.csv", "junctions_long.csv",
@@ -58,7 +58,7 @@ def test_the_folder_has_all_files_and_a_record_of_their_checksums(manifest_path,
     assert sorted(record["files"]) == FILES
     for name, checksum in record["files"].items():
         assert hashlib.sha256((out / name).read_bytes()).hexdigest() == checksum
-    assert has_valid_run(out)
+    assert is_finished(out)
     assert record["samples"]["failing-1"] == "failed"
     assert record["configuration"]["cohort"]["primary_figures"] == ["junction_exponent"]
 
@@ -87,7 +87,7 @@ def test_a_second_run_takes_up_what_is_finished_and_gives_the_same_bytes(manifes
 
     def finished(row):
         folder = sample_folder(out, row)
-        return folder if has_valid_run(folder) else None
+        return folder if is_finished(folder) else None
 
     ran(manifest_path, out, finished=finished, on_progress=told.append)
     assert sum(p.outcome.resumed for p in told) == 16
@@ -140,7 +140,7 @@ def test_an_unfinished_write_leaves_no_valid_record(manifest_path, tmp_path, mon
     )
     with pytest.raises(OSError, match="No space left"):
         ran(manifest_path, out)
-    assert not has_valid_run(out)
+    assert not is_finished(out)
     assert (out / "cohort.html").read_bytes() == old
     assert not list(out.glob("*.part"))
 
@@ -205,6 +205,7 @@ def test_the_page_is_whole_and_needs_no_network(page):
 def test_the_page_shows_every_sample_failures_methods_and_the_caution(page):
     for words in (
         "not a medical device",
+        "licensed professionals",
         "c0-1: 3.05",
         "failing-1",
         "the network has no inlet",

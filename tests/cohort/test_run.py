@@ -1,6 +1,5 @@
 """Samples run one by one and in parallel: isolation, resuming, progress, processes that die."""
 
-import json
 from functools import partial
 from pathlib import Path
 
@@ -8,7 +7,8 @@ import cohort_fakes as fakes
 import pytest
 
 from ramulus import UnusableInputError
-from ramulus.cohort.run import has_valid_run, run_samples
+from ramulus._folder import is_finished
+from ramulus.cohort.run import run_samples
 
 
 @pytest.fixture
@@ -43,7 +43,7 @@ def test_finished_samples_are_not_measured_again(measured):
     run_samples(rows[:1], measure)
 
     def finished(row):
-        return folder / row.sample if has_valid_run(folder / row.sample) else None
+        return folder / row.sample if is_finished(folder / row.sample) else None
 
     outcomes = run_samples(rows, measure, finished=finished)
     assert [outcome.resumed for outcome in outcomes] == [True, False, False]
@@ -91,7 +91,7 @@ def test_two_processes_survive_samples_that_kill_them(measured):
     kinds = {outcome.sample: outcome.kind for outcome in outcomes}
     expected = {"dying1": "died", "dying2": "died", "failing": "work"}
     assert kinds == dict.fromkeys(names, "") | expected
-    assert all(has_valid_run(folder / name) for name in names if not kinds[name])
+    assert all(is_finished(folder / name) for name in names if not kinds[name])
     attempts = [line.split() for line in (folder / "log").read_text().splitlines()]
     assert sum(name == "dying1" for name, _ in attempts) == 2  # the second time alone
     assert len({process for _, process in attempts}) >= 2
@@ -124,41 +124,3 @@ def test_a_scheduler_elsewhere_runs_the_samples(measured):
         address = cluster.scheduler_address
         outcomes = run_samples(fakes.rows_named("a", "raising"), measure, scheduler=address)
     assert [outcome.kind for outcome in outcomes] == ["", "work"]
-
-
-def test_a_run_is_valid_only_while_every_file_is_whole(tmp_path):
-    folder = fakes.write_folder(tmp_path / "a", fakes.summary("a"))
-    assert has_valid_run(folder)
-    with (folder / "orders.csv").open("ab") as file:
-        file.write(b" ")
-    assert not has_valid_run(folder)
-    fakes.write_folder(folder, fakes.summary("a"))
-    (folder / "junctions.csv").unlink()
-    assert not has_valid_run(folder)
-
-
-@pytest.mark.parametrize(
-    "text",
-    [
-        "",
-        "{",
-        "[]",
-        "{}",
-        '{"files": {}}',
-        '{"files": ["a"]}',
-        '{"files": {"a": 1}}',
-        '{"files": 3}',
-    ],
-)
-def test_a_damaged_record_is_no_valid_run(tmp_path, text):
-    (tmp_path / "run.json").write_text(text)
-    assert not has_valid_run(tmp_path)
-
-
-def test_a_record_cannot_lead_out_of_its_folder(tmp_path):
-    folder = fakes.write_folder(tmp_path / "a", fakes.summary("a"))
-    outside = fakes.write_folder(tmp_path / "b", fakes.summary("b"))
-    files = json.loads((outside / "run.json").read_text())["files"]
-    record = {"files": {f"../b/{name}": checksum for name, checksum in files.items()}}
-    (folder / "run.json").write_text(json.dumps(record))
-    assert not has_valid_run(folder)

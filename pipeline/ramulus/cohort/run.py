@@ -1,6 +1,5 @@
 """Run the samples of a cohort: each on its own, resumed, isolated; one after another or on dask."""
 
-import json
 import logging
 import os
 import time
@@ -11,11 +10,10 @@ from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
 
-from .._files import sha256_of
 from ..errors import UnusableInputError, WorkFailedError
 from .manifest import ManifestRow
 
-__all__ = ["Outcome", "Progress", "has_valid_run", "run_samples"]
+__all__ = ["MeasureSample", "Outcome", "Progress", "run_samples"]
 
 MeasureSample = Callable[[ManifestRow], Path]
 
@@ -54,6 +52,13 @@ class Progress:
     failed: int
     total: int
     seconds_left: float
+
+    @property
+    def words(self) -> str:
+        """The sample and what became of it."""
+        outcome = self.outcome
+        state = "failed" if outcome.folder is None else "found" if outcome.resumed else "done"
+        return f"{outcome.sample} {state}"
 
 
 def run_samples(
@@ -266,33 +271,3 @@ def _in_parallel(
         if waiting:
             submit()
         yield row, outcome
-
-
-def has_valid_run(folder: Path) -> bool:
-    """Tell whether a folder has a `run.json` and every file that it names, unchanged.
-
-    Parameters
-    ----------
-    folder : Path
-        A sample's or a cohort's folder.
-
-    Returns
-    -------
-    bool
-        False where anything is missing, damaged or leads out of the folder.
-
-    Examples
-    --------
-    >>> has_valid_run(Path("no such folder"))
-    False
-    """
-    try:
-        files = json.loads((folder / "run.json").read_bytes())["files"]
-        inside = folder.resolve()
-        return bool(files) and all(
-            (inside / name).resolve().is_relative_to(inside)
-            and sha256_of(inside / name) == checksum
-            for name, checksum in files.items()
-        )
-    except (OSError, ValueError, KeyError, TypeError, AttributeError):
-        return False
