@@ -49,11 +49,11 @@ class CleanSettings(Settings):
         source="common practice, no source; the report shows how many fall to it",
     )
     spur_voxels: float = setting(
-        2.0,
+        3.0,
         "and from this protrusion in voxel edges of the stack along its direction",
         unit="voxels",
         ge=0,
-        source="own phantom study: bumps of one slice in anisotropic, noisy stacks",
+        source="own phantom study: noise makes bumps of up to three voxels",
     )
     part_length_diameters: float = setting(
         3.0,

@@ -53,7 +53,9 @@ def join_series(graph: CentrelineGraph, keep: np.ndarray | None = None) -> Centr
     point_offsets = np.concatenate(([0], ends_of[offsets[1:] - 1]))
     resolved = np.logical_and.reduceat(graph.segment_resolved[chain], offsets[:-1])
     review = graph.segment_review[chain[offsets[:-1]]]
-    for k in np.flatnonzero(np.logical_or.reduceat(graph.segment_review[chain] != "", offsets[:-1])):
+    for k in np.flatnonzero(
+        np.logical_or.reduceat(graph.segment_review[chain] != "", offsets[:-1])
+    ):
         review[k] = _joined(graph.segment_review[chain[offsets[k] : offsets[k + 1]]])
     joined = graph.replace(
         segment_nodes=nodes[:n].copy(), point_offsets=point_offsets.astype(np.int64),
@@ -63,7 +65,9 @@ def join_series(graph: CentrelineGraph, keep: np.ndarray | None = None) -> Centr
     return joined.select_segments(np.arange(n))
 
 
-def merge_nodes(graph: CentrelineGraph, group: np.ndarray, weight: np.ndarray, drop: np.ndarray) -> CentrelineGraph:
+def merge_nodes(
+    graph: CentrelineGraph, group: np.ndarray, weight: np.ndarray, drop: np.ndarray
+) -> CentrelineGraph:
     """Return the graph with the nodes of each group made one, at their weighted mean.
 
     Parameters
@@ -78,7 +82,10 @@ def merge_nodes(graph: CentrelineGraph, group: np.ndarray, weight: np.ndarray, d
     n = int(group.max()) + 1 if len(group) else 0
     total = np.bincount(group, weights=weight, minlength=n)
     position = np.stack(
-        [np.bincount(group, weights=weight * graph.node_position_um[:, a], minlength=n) / total for a in range(3)],
+        [
+            np.bincount(group, weights=weight * graph.node_position_um[:, a], minlength=n) / total
+            for a in range(3)
+        ],
         axis=1,
     )
     kind = np.zeros(n, np.int8)
@@ -144,7 +151,9 @@ def add_segments(graph: CentrelineGraph, pairs: np.ndarray, review: str) -> Cent
         return graph
     widest = np.zeros(graph.n_nodes)
     for side, at in ((0, graph.point_offsets[:-1]), (1, graph.point_offsets[1:] - 1)):
-        np.maximum.at(widest, graph.segment_nodes[:, side], np.nan_to_num(graph.point_radius_map_um[at]))
+        np.maximum.at(
+            widest, graph.segment_nodes[:, side], np.nan_to_num(graph.point_radius_map_um[at])
+        )
     step = min(graph.spacing_um) if any(graph.spacing_um) else 1.0
     lines, radii = [], []
     for a, b in pairs.tolist():
@@ -163,9 +172,13 @@ def add_segments(graph: CentrelineGraph, pairs: np.ndarray, review: str) -> Cent
     }  # fmt: skip
     return graph.replace(
         segment_nodes=np.concatenate([graph.segment_nodes, pairs]),
-        point_offsets=np.concatenate([graph.point_offsets, graph.point_offsets[-1] + np.cumsum(counts)]),
+        point_offsets=np.concatenate(
+            [graph.point_offsets, graph.point_offsets[-1] + np.cumsum(counts)]
+        ),
         segment_resolved=np.concatenate([graph.segment_resolved, np.ones(len(pairs), bool)]),
-        segment_review=np.concatenate([graph.segment_review, np.full(len(pairs), review, dtype=object)]),
+        segment_review=np.concatenate(
+            [graph.segment_review, np.full(len(pairs), review, dtype=object)]
+        ),
         **{name: np.concatenate([getattr(graph, name), value]) for name, value in new.items()},
     )
 
