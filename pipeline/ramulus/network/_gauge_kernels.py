@@ -5,56 +5,77 @@ import math
 import numba
 import numpy as np
 
-N_ANGLES, N_RINGS = 16, 16
+N_ANGLES, N_RINGS = 12, 14
 N_SAMPLES = N_ANGLES * N_RINGS
 TABLE_R, TABLE_D, TABLE_SPAN = 20.0, 0.05, 6.0
-HERMITE_NODE = np.array([0.0, 1.3556261799742659, -1.3556261799742659, 2.8569700138728056, -2.8569700138728056])
-HERMITE_WEIGHT = np.array([0.5333333333333333, 0.2220759220056127, 0.2220759220056127, 0.0112574113277207, 0.0112574113277207])  # fmt: skip
+HERMITE_5 = (0.0, 1.3556261799742659, -1.3556261799742659, 2.8569700138728056, -2.8569700138728056)
+WEIGHT_5 = (0.5333333333333333, 0.2220759220056127, 0.2220759220056127, 0.0112574113277207, 0.0112574113277207)  # fmt: skip
+HERMITE_3 = (0.0, 1.7320508075688772, -1.7320508075688772)
+WEIGHT_3 = (0.6666666666666666, 0.16666666666666666, 0.16666666666666666)
 
 
 @numba.njit(cache=True, nogil=True)
-def disc(distance, radius, table):
+def disc(distance, radius, table, out):
     """Disc of `radius` blurred with a Gaussian of SD 1, at `distance` from its centre.
 
-    Bilinear in a table over (radius, distance - radius); wide discs are straight edges whose half
-    level lies 1 / (2 radius) further in.
+    out: value, derivative by distance, derivative by radius. Bilinear in tables over (radius,
+    distance - radius); wide discs are straight edges whose half level lies 1 / (2 radius) further in.
     """
     d = distance - radius
-    if d >= TABLE_SPAN:
-        return 0.0
-    if d <= -TABLE_SPAN:
-        return 1.0
+    if d >= TABLE_SPAN or d <= -TABLE_SPAN:
+        out[0] = 0.0 if d > 0 else 1.0
+        out[1], out[2] = 0.0, 0.0
+        return
     if radius >= TABLE_R:
-        return 0.5 * math.erfc((d + 0.5 / radius) * 0.7071067811865476)
-    fr = radius / TABLE_R * (table.shape[0] - 1)
+        t = d + 0.5 / radius
+        out[0] = 0.5 * math.erfc(t * 0.7071067811865476)
+        out[1] = -0.3989422804014327 * math.exp(-0.5 * t * t)
+        out[2] = -out[1]
+        return
+    fr = radius / TABLE_R * (table.shape[1] - 1)
     fd = (d + TABLE_SPAN) / TABLE_D
-    i, j = int(fr), int(fd)
-    i = min(i, table.shape[0] - 2)
-    j = min(j, table.shape[1] - 2)
+    i, j = min(int(fr), table.shape[1] - 2), min(int(fd), table.shape[2] - 2)
     a, b = fr - i, fd - j
-    return (table[i, j] * (1 - b) + table[i, j + 1] * b) * (1 - a) + (
-        table[i + 1, j] * (1 - b) + table[i + 1, j + 1] * b
-    ) * a
+    w00, w01, w10, w11 = (1 - a) * (1 - b), (1 - a) * b, a * (1 - b), a * b
+    for k in range(3):
+        out[k] = (
+            w00 * table[k, i, j] + w01 * table[k, i, j + 1] + w10 * table[k, i + 1, j] + w11 * table[k, i + 1, j + 1]
+        )
+    out[2] -= out[1]
 
 
 @numba.njit(cache=True, nogil=True)
-def disc_two(u, v, radius, sigma_u, sigma_v, table):
-    """Disc blurred with an elliptical Gaussian: the isotropic part by the table, the rest by 5 nodes."""
+def disc_two(u, v, radius, sigma_u, sigma_v, table, one, out):
+    """Disc blurred with an elliptical Gaussian: the isotropic part by the table, the rest by nodes.
+
+    out: value, derivatives by u, v and radius.
+    """
     small, large = min(sigma_u, sigma_v), max(sigma_u, sigma_v)
     extra2 = large * large - small * small
+    for k in range(4):
+        out[k] = 0.0
     if extra2 < 0.04 * small * small:
         s = math.sqrt(0.5 * (sigma_u * sigma_u + sigma_v * sigma_v))
-        return disc(math.sqrt(u * u + v * v) / s, radius / s, table)
+        rho = math.sqrt(u * u + v * v)
+        disc(rho / s, radius / s, table, one)
+        out[0] = one[0]
+        if rho > 1e-9:
+            out[1], out[2] = one[1] * u / (rho * s), one[1] * v / (rho * s)
+        out[3] = one[2] / s
+        return
     extra = math.sqrt(extra2)
-    total = 0.0
-    for k in range(5):
-        h = HERMITE_NODE[k] * extra
-        if sigma_v > sigma_u:
-            rho = math.sqrt(u * u + (v - h) * (v - h))
-        else:
-            rho = math.sqrt((u - h) * (u - h) + v * v)
-        total += HERMITE_WEIGHT[k] * disc(rho / small, radius / small, table)
-    return total
+    few = extra2 < small * small
+    for k in range(3 if few else 5):
+        h = extra * (HERMITE_3[k] if few else HERMITE_5[k])
+        w = WEIGHT_3[k] if few else WEIGHT_5[k]
+        uu, vv = (u, v - h) if sigma_v > sigma_u else (u - h, v)
+        rho = math.sqrt(uu * uu + vv * vv)
+        disc(rho / small, radius / small, table, one)
+        out[0] += w * one[0]
+        if rho > 1e-9:
+            out[1] += w * one[1] * uu / (rho * small)
+            out[2] += w * one[1] * vv / (rho * small)
+        out[3] += w * one[2] / small
 
 
 @numba.njit(cache=True, nogil=True)
@@ -235,7 +256,9 @@ def fit_disc(values, reach, voxel_area, start_r, sigma_xy, sigma_z, steep, log_c
         background, contrast = 0.0, 1.0
     if contrast <= 0.0:
         return False
-    peak = max(disc_two(0.0, 0.0, start_r, sigma_xy, sigma_xy, table), 0.2)
+    one, four, moved = np.empty(3), np.empty(4), np.empty(4)
+    disc_two(0.0, 0.0, start_r, sigma_xy, sigma_xy, table, one, four)
+    peak = max(four[0], 0.2)
     par = np.zeros(7)
     par[0] = math.log(start_r)
     par[3] = math.log(contrast) if fixed_levels else math.log(contrast / peak)
@@ -244,23 +267,17 @@ def fit_disc(values, reach, voxel_area, start_r, sigma_xy, sigma_z, steep, log_c
     par[4] = background
     par[5], par[6] = math.log(sigma_xy), math.log(sigma_z)
     low_r, high_r = math.log(0.15 * sigma_xy), math.log(1.2 * reach)
-    matrix, right = np.empty((7, 7)), np.empty((7, 2))
-    column = np.empty((7, N_SAMPLES))
-    model = np.empty(N_SAMPLES)
-    residual = np.empty(N_SAMPLES)
-    damping = 1e-3
-    best = np.inf
+    matrix, right = np.zeros((7, 7)), np.zeros((7, 2))
+    column = np.zeros((7, N_SAMPLES))
+    residual = np.zeros(N_SAMPLES)
+    damping, best = 1e-3, np.inf
     trial = par.copy()
     spread2 = 1.0
-    for iteration in range(40):
-        r, a = math.exp(trial[0]), math.exp(trial[3])
-        sx, sz = math.exp(trial[5]), math.exp(trial[6])
-        sv = math.sqrt(sx * sx + (sz * sz - sx * sx) * steep * steep)
-        for k in range(N_SAMPLES):
-            if base[k] > 0.0:
-                model[k] = disc_two(pu[k] - trial[1], pv[k] - trial[2], r, sx, sv, table)
-                residual[k] = values[k] - trial[4] - a * model[k]
-        if iteration == 0 or iteration == 4 or iteration == 8:
+    accepted = 0
+    for iteration in range(16):
+        a = math.exp(trial[3])
+        evaluate(column, residual, base, values, trial, pu, pv, steep, free_blur, fixed_levels, table)
+        if iteration == 0 or accepted == 2:
             # Scale from the median residual, never below 4 % of the contrast; weights of a biweight.
             m = 0
             for k in range(N_SAMPLES):
@@ -269,14 +286,13 @@ def fit_disc(values, reach, voxel_area, start_r, sigma_xy, sigma_z, steep, log_c
                     m += 1
             scale = max(1.4826 * np.median(outer[:m]), 0.04 * a)
             for k in range(N_SAMPLES):
-                q = residual[k] / (5.0 * scale) if base[k] > 0.0 else 0.0
+                q = residual[k] / (5.0 * scale) if base[k] > 0.0 else 2.0
                 kept[k] = base[k] * (1.0 - q * q) ** 2 if abs(q) < 1.0 else 0.0
             best = np.inf
         cost, mass = 0.0, 0.0
         for k in range(N_SAMPLES):
-            if base[k] > 0.0:
-                cost += kept[k] * residual[k] ** 2
-                mass += kept[k]
+            cost += kept[k] * residual[k] ** 2
+            mass += kept[k]
         if mass < 8.0:
             return False
         if best == np.inf:
@@ -288,54 +304,35 @@ def fit_disc(values, reach, voxel_area, start_r, sigma_xy, sigma_z, steep, log_c
             cost += ((trial[5] - math.log(sigma_xy)) / 0.7) ** 2 + ((trial[6] - math.log(sigma_z)) / 0.7) ** 2
         if cost > best:
             damping *= 8.0
-            if damping > 1e6:
+            if damping > 1e5:
                 break
         else:
-            done = best - cost < 1e-4 * (1.0 + cost) and iteration > 9
+            settled = best - cost < 2e-3 * (1.0 + cost) and accepted > 3
             best = cost
+            accepted += 1
             damping = max(damping * 0.3, 1e-7)
             for i in range(7):
                 par[i] = trial[i]
-            if done:
+            accumulate(column, residual, kept, par, spread2, log_contrast, contrast_sd, free_blur, fixed_levels,
+                       sigma_xy, sigma_z, n_par, matrix, right)  # fmt: skip
+            if settled:
                 break
-            step = 0.02
-            for k in range(N_SAMPLES):
-                if base[k] <= 0.0:
-                    continue
-                u, v = pu[k] - par[1], pv[k] - par[2]
-                column[0, k] = a * (disc_two(u, v, r * (1 + step), sx, sv, table) - model[k]) / step
-                h = step * max(r, sx)
-                column[1, k] = a * (disc_two(u - h, v, r, sx, sv, table) - model[k]) / h
-                column[2, k] = a * (disc_two(u, v - h, r, sx, sv, table) - model[k]) / h
-                column[3, k] = 0.0 if fixed_levels else a * model[k]
-                column[4, k] = 0.0 if fixed_levels else 1.0
-                if free_blur:
-                    tx = sx * (1 + step)
-                    tv = math.sqrt(tx * tx + (sz * sz - tx * tx) * steep * steep)
-                    column[5, k] = a * (disc_two(u, v, r, tx, tv, table) - model[k]) / step
-                    tz = sz * (1 + step)
-                    tv = math.sqrt(sx * sx + (tz * tz - sx * sx) * steep * steep)
-                    column[6, k] = a * (disc_two(u, v, r, sx, tv, table) - model[k]) / step
-        # Normal equations at the best parameters so far, with Marquardt's damping.
-        normal(column, kept, base, values, par, pu, pv, steep, table, spread2, contrast_sd, log_contrast,
-               free_blur, sigma_xy, sigma_z, fixed_levels, n_par, matrix, right)  # fmt: skip
+        normal = matrix.copy()
+        step = right.copy()
         for i in range(n_par):
-            matrix[i, i] *= 1.0 + damping
-            matrix[i, i] += 1e-12
-        if not solve_in_place(matrix, right, n_par):
+            normal[i, i] = normal[i, i] * (1.0 + damping) + 1e-12
+        if not solve_in_place(normal, step, n_par):
             return False
         for i in range(n_par):
-            change = right[i, 0]
             limit = 0.4 if i in (0, 3, 5, 6) else (0.5 * math.exp(par[0]) if i < 3 else 1e30)
-            trial[i] = par[i] + min(max(change, -limit), limit)
+            trial[i] = par[i] + min(max(step[i, 0], -limit), limit)
         trial[0] = min(max(trial[0], low_r), high_r)
         if free_blur:
             trial[5] = min(max(trial[5], math.log(0.2 * sigma_xy)), math.log(6.0 * sigma_xy))
             trial[6] = min(max(trial[6], math.log(0.2 * sigma_z)), math.log(6.0 * sigma_z))
     if best == np.inf:
         return False
-    normal(column, kept, base, values, par, pu, pv, steep, table, spread2, contrast_sd, log_contrast,
-           free_blur, sigma_xy, sigma_z, fixed_levels, n_par, matrix, right)  # fmt: skip
+    evaluate(column, residual, base, values, par, pu, pv, steep, free_blur, fixed_levels, table)
     # Second right-hand side: how the model moves with a common change of the blur.
     a, r = math.exp(par[3]), math.exp(par[0])
     sx, sz = math.exp(par[5]), math.exp(par[6])
@@ -349,13 +346,13 @@ def fit_disc(values, reach, voxel_area, start_r, sigma_xy, sigma_z, steep, log_c
         full += base[k]
         if kept[k] > 0.0:
             u, v = pu[k] - par[1], pv[k] - par[2]
-            here = disc_two(u, v, r, sx, sv, table)
-            moved = a * (disc_two(u, v, r, 1.02 * sx, 1.02 * sv, table) - here) / 0.02
-            e = values[k] - par[4] - a * here
+            disc_two(u, v, r, 1.02 * sx, 1.02 * sv, table, one, moved)
+            e = residual[k]
+            change = (a * moved[0] - (values[k] - par[4] - e)) / 0.02
             cost += kept[k] * e * e
             mass += kept[k]
             for i in range(n_par):
-                right[i, 1] -= kept[k] * column[i, k] * moved / spread2
+                right[i, 1] -= kept[k] * column[i, k] * change / spread2
     if not solve_in_place(matrix, right, n_par):
         return False
     final2 = max(cost / max(mass - n_par, 1.0), 1e-30)
@@ -370,28 +367,46 @@ def fit_disc(values, reach, voxel_area, start_r, sigma_xy, sigma_z, steep, log_c
 
 
 @numba.njit(cache=True, nogil=True)
-def normal(column, kept, base, values, par, pu, pv, steep, table, spread2, contrast_sd, log_contrast,
-           free_blur, sigma_xy, sigma_z, fixed_levels, n_par, matrix, right):  # fmt: skip
-    """Fill J'WJ and J'We with the priors."""
+def evaluate(column, residual, base, values, par, pu, pv, steep, free_blur, fixed_levels, table):
+    """Residuals and the Jacobian's columns at the parameters."""
+    one, four, moved = np.empty(3), np.empty(4), np.empty(4)
     a, r = math.exp(par[3]), math.exp(par[0])
     sx, sz = math.exp(par[5]), math.exp(par[6])
     sv = math.sqrt(sx * sx + (sz * sz - sx * sx) * steep * steep)
-    for i in range(n_par):
-        right[i, 0] = 0.0
-        right[i, 1] = 0.0
-        for j in range(n_par):
-            matrix[i, j] = 0.0
-    for k in range(N_SAMPLES):
-        if kept[k] <= 0.0:
+    tx, tz = 1.02 * sx, 1.02 * sz
+    sv_x = math.sqrt(tx * tx + (sz * sz - tx * tx) * steep * steep)
+    sv_z = math.sqrt(sx * sx + (tz * tz - sx * sx) * steep * steep)
+    for k in range(len(base)):
+        if base[k] <= 0.0:
             continue
-        e = values[k] - par[4] - a * disc_two(pu[k] - par[1], pv[k] - par[2], r, sx, sv, table)
-        w = kept[k] / spread2
-        for i in range(n_par):
-            right[i, 0] += w * column[i, k] * e
-            for j in range(i + 1):
-                matrix[i, j] += w * column[i, k] * column[j, k]
+        u, v = pu[k] - par[1], pv[k] - par[2]
+        disc_two(u, v, r, sx, sv, table, one, four)
+        residual[k] = values[k] - par[4] - a * four[0]
+        column[0, k] = a * r * four[3]
+        column[1, k], column[2, k] = -a * four[1], -a * four[2]
+        column[3, k] = 0.0 if fixed_levels else a * four[0]
+        column[4, k] = 0.0 if fixed_levels else 1.0
+        if free_blur:
+            disc_two(u, v, r, tx, sv_x, table, one, moved)
+            column[5, k] = a * (moved[0] - four[0]) / 0.02
+            disc_two(u, v, r, sx, sv_z, table, one, moved)
+            column[6, k] = a * (moved[0] - four[0]) / 0.02
+
+
+@numba.njit(cache=True, nogil=True)
+def accumulate(column, residual, kept, par, spread2, log_contrast, contrast_sd, free_blur, fixed_levels,
+               sigma_xy, sigma_z, n_par, matrix, right):  # fmt: skip
+    """Fill J'WJ and J'We with the priors."""
     for i in range(n_par):
-        for j in range(i):
+        total = 0.0
+        for k in range(len(kept)):
+            total += kept[k] * column[i, k] * residual[k]
+        right[i, 0] = total / spread2
+        for j in range(i + 1):
+            total = 0.0
+            for k in range(len(kept)):
+                total += kept[k] * column[i, k] * column[j, k]
+            matrix[i, j] = total / spread2
             matrix[j, i] = matrix[i, j]
     if contrast_sd > 0.0:
         matrix[3, 3] += 1.0 / contrast_sd**2

@@ -331,8 +331,7 @@ class _Work:
 
     def name_ends(self) -> None:
         """Tell junctions, blind ends and ends cut by a face apart again."""
-        margin_um = max(self.graph.spacing_um)
-        kind = end_kinds(self.graph, margin_um=margin_um, origin_um=self.origin_um)
+        kind = end_kinds(self.graph, origin_um=self.origin_um)
         self.graph = self.graph.replace(node_kind=kind)
 
     def note(

@@ -19,6 +19,7 @@ from .zones import zone_bounds_um
 
 __all__ = ["Blur", "GaugeSettings", "Gauged", "blurred_disc_table", "gauge"]
 
+_THIN = 2.5  # in SDs of the blur: below, a vessel's plateau does not show its contrast
 _METHOD = {name: index for index, name in enumerate(RADIUS_METHODS)}
 
 
@@ -96,13 +97,15 @@ def gauge(
     if not known_levels:
         prior = _contrast_prior(fit, stations, blur, settings)
         if prior is not None:
-            fit = sampler.fit(stations, blur, np.where(fit.good, fit.radius, stations["map_um"]), prior)
+            fit = _thin_again(sampler, stations, blur, fit, prior)
     return _carried(graph, stations, fit, blur, sampler, settings)
 
 
 @functools.cache
 def blurred_disc_table() -> np.ndarray:
-    """(201, 241) disc of radius R blurred with SD 1, over R in 0..20 and distance - R in -6..6.
+    """(3, 201, 241): disc of radius R blurred with SD 1, its derivatives by distance and by R.
+
+    Over R in 0..20 and distance - R in -6..6; the third at fixed distance - R.
 
     The non-central chi-squared distribution with two degrees of freedom gives it: the chance that
     a point blurred from the given distance falls inside the disc.
@@ -111,9 +114,12 @@ def blurred_disc_table() -> np.ndarray:
 
     radius = np.linspace(0.0, kernels.TABLE_R, 201)[:, None]
     shift = np.arange(-kernels.TABLE_SPAN, kernels.TABLE_SPAN + 1e-9, kernels.TABLE_D)[None, :]
-    distance = np.maximum(radius + shift, 0.0)
-    table = chndtr(radius**2, 2.0, distance**2)
-    return np.ascontiguousarray(np.nan_to_num(table))
+    # Left of the centre the profile is mirrored, so that its slopes there are right as well.
+    distance = np.abs(radius + shift)
+    value = np.nan_to_num(chndtr(np.maximum(radius, 1e-9) ** 2, 2.0, distance**2))
+    return np.ascontiguousarray(np.stack([
+        value, np.gradient(value, kernels.TABLE_D, axis=1), np.gradient(value, radius[1, 0], axis=0),
+    ]))  # fmt: skip
 
 
 @dataclass(frozen=True, slots=True)
@@ -231,6 +237,25 @@ def _blur(sampler: _Sampler, stations: dict[str, np.ndarray], settings: GaugeSet
     sigma_z = float(np.median(fit.sigma_z[weight_z])) if weight_z.sum() >= 8 else sigma_xy * z / xy
     spread = 1.4826 * float(np.median(np.abs(np.log(fit.sigma_xy[good] / sigma_xy))))
     return Blur(sigma_xy, sigma_z, "estimated", max(0.03, spread / np.sqrt(good.sum() / 4)), int(good.sum()))
+
+
+def _thin_again(sampler, stations, blur, fit, prior):  # noqa: ANN001, ANN202
+    """Fit the vessels that are thin against the blur once more, now with the contrast's prior.
+
+    In wide vessels the plateau shows the contrast; a prior would only pull at it.
+    """
+    thin = np.flatnonzero(~fit.good | (fit.radius < _THIN * blur.sigma_xy_um))
+    if not len(thin):
+        return fit
+    some = {name: values[thin] for name, values in stations.items()}
+    start = np.where(fit.good, fit.radius, stations["map_um"])[thin]
+    again = sampler.fit(some, blur, start, (prior[0][thin], prior[1]))
+    merged = []
+    for name in _Fit.__dataclass_fields__:
+        values = getattr(fit, name).copy()
+        values[thin] = getattr(again, name)
+        merged.append(values)
+    return _Fit(*merged)
 
 
 def _contrast_prior(fit, stations, blur, settings):  # noqa: ANN001, ANN202

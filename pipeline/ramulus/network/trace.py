@@ -66,26 +66,26 @@ def trace(skeleton: Skeleton) -> CentrelineGraph:
     offsets, points_um = _with_ends(position_um, chain_start, node_um[ends])
     _, radius_um = _with_ends(skeleton.distance_um[chain], chain_start, node_radius_um[ends])
     graph = _raw_graph(skeleton, node_um, ends, offsets, points_um, radius_um)
-    margin_um = max(skeleton.spacing_um)
-    return graph.replace(
-        node_kind=end_kinds(graph, margin_um=margin_um, origin_um=skeleton.origin_um)
-    )
+    return graph.replace(node_kind=end_kinds(graph, origin_um=skeleton.origin_um))
 
 
 def end_kinds(
-    graph: CentrelineGraph, *, margin_um: float, origin_um: Sequence[float] = (0.0, 0.0, 0.0)
+    graph: CentrelineGraph,
+    *,
+    margin_voxels: float = 1.0,
+    origin_um: Sequence[float] = (0.0, 0.0, 0.0),
 ) -> np.ndarray:
     """Return node kinds by the graph alone: junction, end, or border.
 
-    A free end is `border` where it lies within its vessel's radius and `margin_um` of a face of the
-    volume and the vessel runs towards that face, or where it lies on the face.
+    A free end is `border` where it lies within its vessel's radius and `margin_voxels` of a face of
+    the volume and the vessel runs towards that face, or where it lies on the face.
 
     Parameters
     ----------
     graph : CentrelineGraph
         With `extent_um` and `spacing_um`; without them no end is at a border.
-    margin_um : float
-        Distance allowed beyond the radius.
+    margin_voxels : float
+        Distance allowed beyond the radius, in voxel edges along the face's normal.
     origin_um : sequence of float
         Centre of the volume's first voxel.
 
@@ -100,7 +100,7 @@ def end_kinds(
     ...     [[5, 5, 0], [5, 5, 6]], [[0, 1]], [[[5, 5, 0], [5, 5, 6]]],
     ...     spacing_um=(1.0, 1.0, 1.0), extent_um=(10.0, 10.0, 10.0),
     ... )
-    >>> [NODE_KINDS[kind] for kind in end_kinds(graph, margin_um=1.0)]
+    >>> [NODE_KINDS[kind] for kind in end_kinds(graph)]
     ['border', 'end']
     """
     degree = graph.node_degree()
@@ -122,7 +122,7 @@ def end_kinds(
         back = tip + inwards * count
         outward = place_um - graph.point_position_um[back]
         outward /= np.maximum(np.linalg.norm(outward, axis=1, keepdims=True), 1e-12)
-        reach_um = (np.maximum(radius_um[tip], radius_um[back]) + margin_um)[:, None]
+        reach_um = np.maximum(radius_um[tip], radius_um[back])[:, None] + margin_voxels * spacing
         low_um = place_um - np.array(origin_um) + spacing / 2
         high_um = extent - low_um
         cut = ((low_um <= reach_um) & (outward < -_OUTWARD)) | (low_um <= 0.75 * spacing)
