@@ -7,7 +7,7 @@ import numpy as np
 
 from .config import Configuration
 from .errors import UnusableInputError
-from .measure import available_gib, kind_of
+from .intake import available_gib, kind_of
 from .plan import plan_of
 from .stack.open import StackReport, describe
 

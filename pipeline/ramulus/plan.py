@@ -1,7 +1,7 @@
 """What measuring a stack will take: working grid, time by stage, memory; from its header alone."""
 
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from math import prod
 
 __all__ = ["Plan", "plan_of"]
@@ -34,6 +34,10 @@ class Plan:
     def total_seconds(self) -> float:
         """Seconds over all stages."""
         return sum(self.seconds.values())
+
+    def only(self, stages: Sequence[str]) -> "Plan":
+        """Return the plan of these stages alone."""
+        return replace(self, seconds={k: v for k, v in self.seconds.items() if k in stages})
 
     def share_before(self, stage: str) -> float:
         """Return the share of the expected time that lies before a stage; 0 for one not planned."""

@@ -48,7 +48,9 @@ class Reporter:
         self.level = _LOGGER.level
 
     def __enter__(self) -> Self:
-        _LOGGER.addHandler(self.handler)
+        # At the root, so that what libraries say goes to the log too, and never to the terminal.
+        logging.getLogger().addHandler(self.handler)
+        logging.captureWarnings(capture=True)
         _LOGGER.setLevel(logging.INFO)
         if not self.quiet and sys.stderr.isatty():
             self._open_bar()
@@ -79,7 +81,8 @@ class Reporter:
         self._close_bar()
         if error is not None and not isinstance(error, SystemExit):
             _LOGGER.error("%s: %s", type(error).__name__, error)
-        _LOGGER.removeHandler(self.handler)
+        logging.getLogger().removeHandler(self.handler)
+        logging.captureWarnings(capture=False)
         _LOGGER.setLevel(self.level)
         self.handler.close()
 
