@@ -57,7 +57,7 @@ def test_a_tee_has_one_junction_at_its_cluster():
 def test_junctions_lie_at_the_mean_of_their_voxels_weighted_by_distance():
     from scipy import ndimage as ndi
 
-    noise = np.random.default_rng(6).random((12, 12, 12)) < 0.3
+    noise = np.random.default_rng(6).random((18, 18, 18)) < 0.09
     skeleton = without_corners(thin(Mask(np.pad(noise, 1), (1.0, 1.0, 1.0))))
     volume, weight = np.zeros(skeleton.shape), np.zeros(skeleton.shape)
     volume[tuple(skeleton.voxels.T)] = 1
