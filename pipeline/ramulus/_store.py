@@ -57,7 +57,7 @@ class WorkStore:
         """Return the value; KeyError where there is none, or a damaged one (which is removed)."""
         path = self._path(name, key)
         try:
-            with np.load(path, allow_pickle=False) as file:
+            with path.open("rb") as stream, np.load(stream, allow_pickle=False) as file:
                 head = json.loads(file["head"].tobytes())
                 if head["key"] != key:
                     raise KeyError(key)  # noqa: TRY301 - one way out for all that does not hold
