@@ -10,8 +10,10 @@ __all__ = ["graphml_bytes"]
 
 _NAMESPACE = "http://graphml.graphdrawing.org/xmlns"
 # What XML 1.0 cannot hold, even escaped: control characters and lone surrogates.
-_FORBIDDEN = {c: "\N{REPLACEMENT CHARACTER}" for c in (*range(9), 11, 12, *range(14, 32))}
-_FORBIDDEN |= {c: "\N{REPLACEMENT CHARACTER}" for c in (*range(0xD800, 0xE000), 0xFFFE, 0xFFFF)}
+_FORBIDDEN = dict.fromkeys(
+    (*range(9), 11, 12, *range(14, 32), *range(0xD800, 0xE000), 0xFFFE, 0xFFFF),
+    "\N{REPLACEMENT CHARACTER}",
+)
 
 
 def graphml_bytes(nodes: pd.DataFrame, segments: pd.DataFrame) -> bytes:
@@ -75,7 +77,7 @@ def _data(column: pd.Series, key: str) -> list[str]:
     kind = _type(column)
     values = column.astype(object).tolist()
     if kind == "double":
-        known &= np.isfinite(column.to_numpy(dtype=float, na_value=np.nan))
+        known = np.isfinite(column.to_numpy(dtype=float, na_value=np.nan))
         texts = [repr(float(v)) if k else "" for v, k in zip(values, known, strict=True)]
     elif kind == "boolean":
         texts = ["true" if k and v else "false" for v, k in zip(values, known, strict=True)]

@@ -23,13 +23,12 @@ _HEADER = "# centreline tree; positions and radii in um; columns: id type x y z 
 
 
 def read_swc(path: Path | str, *, unit: str = "um") -> CentrelineGraph:
-    """Read an SWC tree or forest; unbranched points between nodes become one segment's points.
+    r"""Read an SWC tree or forest; unbranched points between nodes become one segment's points.
 
-    The points without a parent become nodes of kind `inlet`. A point that lies where its parent lies
-    is the same place: the step between them is dropped, and with it an end that has no length. At a
-    branching a branch takes its own radius from its own next point on, since the point shared with
-    its parent carries the parent's. A radius of 0 means that none is known (NaN). The types in the
-    second column are not told apart.
+    The points without a parent become nodes of kind `inlet`. A point at its parent's place is
+    merged into it, and so is an end that has no length. At a branching a branch takes its radius
+    from its own next point on, since the point shared with its parent carries the parent's. A
+    radius of 0 means that none is known (NaN). The types in the second column are not told apart.
 
     Parameters
     ----------
@@ -56,7 +55,7 @@ def read_swc(path: Path | str, *, unit: str = "um") -> CentrelineGraph:
     >>> with TemporaryDirectory() as folder:
     ...     file = Path(folder) / "fork.swc"
     ...     rows = ["1 0 0 0 0 2 -1", "2 0 9 0 0 2 1", "3 0 9 4 0 1.6 2", "4 0 9 0 4 1.6 2"]
-    ...     _ = file.write_text("\\n".join(rows))
+    ...     _ = file.write_text("\n".join(rows))
     ...     read_swc(file, unit="mm").segment_length_um().tolist()
     [9000.0, 4000.0, 4000.0]
     """
@@ -133,9 +132,7 @@ def _numbered(lines: Iterable[str], name: str) -> Iterator[tuple[int, list[float
         yield number, values
 
 
-def _whole_ids(
-    rows: np.ndarray, line_of: np.ndarray, name: str
-) -> tuple[np.ndarray, np.ndarray]:
+def _whole_ids(rows: np.ndarray, line_of: np.ndarray, name: str) -> tuple[np.ndarray, np.ndarray]:
     ids = rows[:, [0, 6]]
     bad = np.argwhere((ids != np.floor(ids)) | (np.abs(ids) > _LARGEST_ID))
     if len(bad):

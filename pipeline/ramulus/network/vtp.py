@@ -46,7 +46,8 @@ def vtp_bytes(graph: CentrelineGraph, segments: pd.DataFrame) -> bytes:
         '<?xml version="1.0"?>',
         '<VTKFile type="PolyData" version="1.0" byte_order="LittleEndian" header_type="UInt64">',
         f"<PolyData><Piece {counts} {none}>",
-        '<PointData Scalars="radius_um">', _array("radius_um", graph.point_radius_um), "</PointData>",
+        '<PointData Scalars="radius_um">',
+        _array("radius_um", graph.point_radius_um), "</PointData>",
         "<CellData>", *_cell_arrays(segments), "</CellData>",
         "<Points>", _array("Points", graph.point_position_um[:, ::-1]), "</Points>",
         "<Lines>", _array("connectivity", np.arange(graph.n_points)),
@@ -72,4 +73,6 @@ def _array(name: str, values: np.ndarray) -> str:
     data = np.ascontiguousarray(values, dtype=stored_as).tobytes()
     body = b64encode(len(data).to_bytes(8, "little") + data).decode()
     size = f' NumberOfComponents="{values.shape[1]}"' if values.ndim > 1 else ""
-    return f'<DataArray type="{kind}" Name={quoteattr(name)}{size} format="binary">{body}</DataArray>'
+    return (
+        f'<DataArray type="{kind}" Name={quoteattr(name)}{size} format="binary">{body}</DataArray>'
+    )
