@@ -70,6 +70,13 @@ def test_intervals_and_means_are_drawn_where_they_are_known():
     assert kinds.count("centre") == 2
 
 
+def test_one_huge_interval_does_not_press_the_dots_together():
+    dots = [dot("s1", 1.0), dot("s2", 2.0, low=-1e6, high=1e6), dot("s3", 3.0)]
+    found = marks(strip([("a", dots)]))
+    # The axis spans the values' range of 2 and as much again on either side.
+    assert found["s1"][1] - found["s3"][1] == pytest.approx((190 - 34 - 18) / 3 / 1.12, rel=0.02)
+
+
 def test_names_are_escaped_everywhere():
     nasty = '<script>alert("x")</script>'
     for svg in (

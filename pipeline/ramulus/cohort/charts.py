@@ -86,17 +86,18 @@ def strip_chart(
     str
         An `svg` element; samples that were left out of the comparison are hollow.
     """
-    values = [v for _, dots in groups for d in dots for v in (d.value, d.low, d.high)]
-    axis = _Axis.of([*values, *(v for centre in centres for v in centre)], scale, height)
+    dots = [dot for _, of_group in groups for dot in of_group]
+    seen = [*(dot.value for dot in dots), *(v for centre in centres for v in centre)]
+    axis = _Axis.of(seen, scale, height, reaching=[v for dot in dots for v in (dot.low, dot.high)])
     step = (width - _LEFT - 8) / max(1, len(groups))
     parts = [*axis.drawn(width, unit)]
-    for k, (name, dots) in enumerate(groups):
+    for k, (name, of_group) in enumerate(groups):
         middle = _LEFT + step * (k + 0.5)
-        parts += _strip(dots, middle, step * 0.3, axis.place, k)
+        parts += _strip(of_group, middle, step * 0.3, axis.place, k)
         parts += _centre(centres[k], middle + step * 0.36, axis.place)
         words = _shortened(name, step)
         parts.append(_text(middle, height - 16, words, "middle", "name"))
-        parts.append(_text(middle, height - 3, f"n = {len(dots)}", "middle", "tick"))
+        parts.append(_text(middle, height - 3, f"n = {len(of_group)}", "middle", "tick"))
     return _svg(width, height, title, parts)
 
 
@@ -246,11 +247,22 @@ class _Axis:
     height: float
 
     @classmethod
-    def of(cls, values: Sequence[float], scale: str, height: float) -> "_Axis":
-        shown = [v for v in values if math.isfinite(v) and (scale != "log" or v > 0)]
+    def of(
+        cls, values: Sequence[float], scale: str, height: float, *, reaching: Sequence[float] = ()
+    ) -> "_Axis":
+        """Span the values, and what reaches beyond them by no more than their own range."""
+        shown, beyond = (
+            [math.log10(v) if scale == "log" else v for v in some if _can_show(v, scale)]
+            for some in (values, reaching)
+        )
         if not shown:
             return cls(1.0 if scale == "log" else 0.0, 10.0, scale, height)
-        low, high = (math.log10(v) if scale == "log" else v for v in (min(shown), max(shown)))
+        low, high = min(shown), max(shown)
+        room = (high - low) or math.inf
+        low, high = (
+            min([low, *(max(v, low - room) for v in beyond)]),
+            max([high, *(min(v, high + room) for v in beyond)]),
+        )
         margin = 0.06 * (high - low) or 0.05 * abs(high) or 0.5
         low, high = low - margin, high + margin
         if scale == "log":
@@ -258,7 +270,7 @@ class _Axis:
         return cls(low, high, scale, height)
 
     def shows(self, value: float) -> bool:
-        return math.isfinite(value) and (self.scale != "log" or value > 0)
+        return _can_show(value, self.scale)
 
     def place(self, value: float) -> float:
         low, high = self.low, self.high
@@ -274,6 +286,10 @@ class _Axis:
             yield _text(_LEFT - 5, y + 3.5, _tick_words(tick), "end", "tick")
         if unit:
             yield _text(2, 10, unit, "start", "tick")
+
+
+def _can_show(value: float, scale: str) -> bool:
+    return math.isfinite(value) and (scale != "log" or value > 0)
 
 
 def _tick_words(tick: float) -> str:

@@ -22,8 +22,8 @@ class Figure:
     unit : str
         Its unit as printed.
     scale : str
-        "log" for lengths, diameters, flows and resistances, whose errors and differences are
-        ratios; else "linear".
+        "log" for lengths, diameters, flows, resistances and the ratios of orders (fitted as
+        logarithms), whose errors and differences are ratios; else "linear".
     role : str
         "outcome", or "quality" for what tells of the image rather than of the vessels.
     """
@@ -47,9 +47,9 @@ FIGURES: dict[str, Figure] = {
         Figure("area_ratio_median", "Area ratio at junctions, median"),
         Figure("murray_cost_excess", "Excess over Murray's least cost"),
         Figure("orders", "Orders"),
-        Figure("branching_ratio", "Branching ratio"),
-        Figure("diameter_ratio", "Diameter ratio"),
-        Figure("length_ratio", "Length ratio"),
+        Figure("branching_ratio", "Branching ratio", "", "log"),
+        Figure("diameter_ratio", "Diameter ratio", "", "log"),
+        Figure("length_ratio", "Length ratio", "", "log"),
         Figure("segments_per_element", "Segments per element"),
         Figure("trunk_taper_b", "Taper of the trunk, b"),
         Figure("radius_median_um", "Median radius", "µm", "log"),

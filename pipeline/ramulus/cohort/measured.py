@@ -9,7 +9,8 @@ from typing import Any
 from .._folder import is_finished, locked_folder, write_errors
 from ..config import Configuration, load_configuration
 from ..errors import UnusableInputError, WorkFailedError
-from ..measure import code_sha256, measure
+from ..measure import measure
+from ..provenance import code_sha256
 from ..stack.open import file_sha256
 from .cohort import checked_cohort, run_cohort, sample_folder
 from .figures import FIGURES

@@ -87,11 +87,12 @@ def warnings_of(results: CohortResults) -> list[str]:
         found.append(f"{reason[0].upper()}{reason[1:]}.")
     found += _spacing_warning(table)
     quality = results.comparisons[results.comparisons["role"] == "quality"]
-    for row in quality[quality["p"].astype(float) < 1 - settings.level].to_dict("records"):
+    for row in records(quality[quality["p_adjusted"].astype(float) < 1 - settings.level]):
         label = FIGURES[row["figure"]].label.lower()
         found.append(
             f"The image itself differs between the groups: {label}, {row['group_b']} against "
-            f"{row['group_a']}, p {p_value(row['p'])}. Other differences may come from it."
+            f"{row['group_a']}, adjusted p {p_value(row['p_adjusted'])}. Other differences "
+            "may come from it."
         )
     if results.note:
         found.append(f"Pooled orders: {results.note}.")
