@@ -319,8 +319,8 @@ def label_sets(start, neighbour, member):
 
 @numba.njit(cache=True, nogil=True)
 def accept_tips(
-    tips, is_cap, is_tip_root, distance, before, start, neighbour, position_um, radius, marked, inside,
-    spacing_um, protrusion,
+    tips, is_cap, is_tip_root, distance, before, start, neighbour, position_um, radius, marked,
+    inside, spacing_um, protrusion,
 ):  # fmt: skip
     """Tell which candidate tips stand out from what is marked, in the order given.
 
@@ -332,7 +332,7 @@ def accept_tips(
     """
     accepted = np.zeros(len(tips), dtype=np.bool_)
     queue = np.empty(_NEARBY, dtype=np.int64)
-    walls = np.empty(_NEARBY, dtype=np.float64)
+    walls = np.empty((2, _NEARBY), dtype=np.float64)
     for k in range(len(tips)):
         tip = tips[k]
         base = tip
@@ -383,19 +383,30 @@ _NEARBY = 64
 def wall_beside(
     base, tip_um, apart, start, neighbour, position_um, marked, inside, spacing_um, queue, walls
 ):
-    """Median distance from the marked line to the wall in the direction of a tip, beside its base.
+    """Distance from the marked line to the wall in the direction of a tip, beside its base.
 
-    It is taken from marked voxels between one and two times `apart` from the base.
+    It is taken from marked voxels between one and two times `apart` from the base: the median of
+    each of the line's two sides, and of these the smaller. On one side of a slanting branch the
+    rays may run down the branch itself; beside a mere bulge both sides reach as far.
     """
     queue[0] = base
-    length, found, at = 1, 0, 0
+    length, at = 1, 0
+    side = np.zeros(3)
+    found = np.zeros(2, dtype=np.int64)
     while at < length:
         i = queue[at]
         at += 1
         away = _distance(position_um, i, base)
-        if away > apart and found < _NEARBY:
-            walls[found] = _ray(inside, position_um[i], tip_um - position_um[base], spacing_um)
-            found += 1
+        if away > apart:
+            off = position_um[i] - position_um[base]
+            if found[0] == 0:
+                side[:] = off
+            which = 0 if (off * side).sum() >= 0.0 else 1
+            if found[which] < _NEARBY:
+                walls[which, found[which]] = _ray(
+                    inside, position_um[i], tip_um - position_um[base], spacing_um
+                )
+                found[which] += 1
         if away > 2.0 * apart:
             continue
         for k in range(start[i], start[i + 1]):
@@ -406,10 +417,14 @@ def wall_beside(
             if not known and length < _NEARBY:
                 queue[length] = j
                 length += 1
-    if found < 2:
-        return 0.0
-    walls[:found].sort()
-    return walls[(found - 1) // 2]
+    least = 0.0
+    for which in range(2):
+        n = found[which]
+        if n > 0:
+            walls[which, :n].sort()
+            middle = walls[which, (n - 1) // 2]
+            least = middle if which == 0 else min(least, middle)
+    return least
 
 
 @numba.njit(cache=True, nogil=True)

@@ -88,7 +88,7 @@ def smooth(
 def meeting_points(graph: CentrelineGraph, *, radius_um: np.ndarray) -> np.ndarray:
     """Return (n, 3) node positions where the axes of a junction's segments meet.
 
-    Each segment's axis is the straight line through its points from the zone's edge to one zone
+    Each segment's axis is the straight line through its points from the zone's edge to two zones
     further. The node is the point with the least sum of squared distances to these axes, no farther
     from the old place than the widest radius there. Nodes of fewer than three segment ends, and
     junctions with fewer than two axes to go by, stay.
@@ -215,7 +215,7 @@ def _axes(
     along = arc_um if side == 0 else np.repeat(length_um, counts) - arc_um
     finest = min(graph.spacing_um) if any(graph.spacing_um) else 0.0
     first = np.repeat(reach_um, counts)
-    chosen = (along >= first) & (along <= first + np.maximum(first, 3.0 * finest))
+    chosen = (along >= first) & (along <= first + np.maximum(2.0 * first, 3.0 * finest))
     segment, place_um = graph.point_segment[chosen], graph.point_position_um[chosen]
     count = np.bincount(segment, minlength=graph.n_segments)
     sums = [np.bincount(segment, p, graph.n_segments) for p in place_um.T]
