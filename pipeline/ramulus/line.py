@@ -234,7 +234,9 @@ def _results(stack, analysis: Analysis, mask, edits, facts, projections, profile
         volume_mm2_per_um3 = float(np.prod(stack.size_um))
         analysis.summary["length_density_per_mm2"] = analysis.summary["total_length_um"] / volume_mm2_per_um3 * 1e6
     bridged = sum(e["op"] == "join" for e in edits)
+    spurs = sum(e.get("step") == "spur" for e in edits)
     facts = {**facts, **analysis.facts, "bridged": float(bridged)}
+    facts["spur_share"] = spurs / max(analysis.graph.n_segments, 1)
     return Results(
         analysis.graph, mask, projections, analysis.tables, summary | analysis.summary, facts, edits,
         analysis.flow_settings, profiles,

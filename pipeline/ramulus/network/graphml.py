@@ -19,8 +19,7 @@ _FORBIDDEN = dict.fromkeys(
 def graphml_bytes(nodes: pd.DataFrame, segments: pd.DataFrame) -> bytes:
     """Return the graph as GraphML; nodes and edges keep their numbers, empty cells are left out.
 
-    Written here and not by a graph library because a column keeps its one type, and 10^5 segments
-    take a second.
+    Written here and not by a graph library so that each column keeps one type, whatever its cells.
 
     Parameters
     ----------
