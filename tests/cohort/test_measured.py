@@ -140,6 +140,14 @@ def test_all_broken_configurations_are_told_before_anything_is_measured(study):
     assert not (study / "out").exists()
 
 
+def test_edits_are_refused_rather_than_passed_over(study):
+    (study / "edits.jsonl").touch()
+    rows = [("m1", "p1.ome.tif", "edits.jsonl")]
+    write(study / "one.csv", ("sample", "stack", "edits"), rows)
+    with pytest.raises(UnusableInputError, match="column edits: found edits for m1"):
+        measure_cohort(study / "one.csv", study / "out", changes=QUICK)
+
+
 def test_a_cohort_of_failures_says_so_in_its_last_line(study):
     write(study / "bad.csv", ("sample", "stack"), [("m3", "p3.tif")])
     results = measure_cohort(study / "bad.csv", study / "out", changes=QUICK)

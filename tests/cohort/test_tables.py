@@ -7,14 +7,13 @@ import json
 import cohort_fakes as fakes
 import pandas as pd
 import pytest
-from hypothesis import given, settings
-from hypothesis import strategies as st
 
 from ramulus import WorkFailedError
 from ramulus.cohort.figures import FIGURES
 from ramulus.cohort.manifest import read_manifest
 from ramulus.cohort.run import Outcome
-from ramulus.cohort.tables import cohort_table, csv_bytes, failures_table, long_table, read_results
+from ramulus.cohort.tables import cohort_table, failures_table, long_table, read_results
+from ramulus.network.tables import csv_bytes
 
 REJECT = {"code": "snr_low", "severity": "reject", "value": 1.0, "limit": 3.0, "message": "dark"}
 NOTE = {"code": "anisotropic", "severity": "note", "value": 3.5, "limit": 3.0, "message": "thick"}
@@ -128,35 +127,6 @@ def test_values_that_are_not_finite_are_empty_cells(tmp_path):
     outcome = Outcome("a", folder)
     row = cohort_table(read_manifest(path), [outcome], {"a": read_results(folder)}).iloc[0]
     assert row[["loops", "ends"]].isna().all()
-
-
-@given(st.lists(st.floats(allow_nan=False, allow_infinity=False), min_size=1, max_size=20))
-@settings(deadline=None, max_examples=50)
-def test_numbers_come_back_the_same(values):
-    written = csv_bytes(pd.DataFrame({"x": values})).decode().split()
-    assert [float(cell) for cell in written[1:]] == values
-
-
-@given(
-    st.lists(
-        st.text(st.characters(exclude_characters="\0", codec="utf-8"), max_size=12),
-        min_size=1,
-        max_size=10,
-    )
-)
-@settings(deadline=None, max_examples=100)
-def test_no_text_cell_begins_like_a_formula(texts):
-    written = csv_bytes(pd.DataFrame({"text": texts})).decode()
-    cells = [row[0] for row in csv.reader(io.StringIO(written, newline=""))][1:]
-    for cell, text in zip(cells, texts, strict=True):
-        if cell[:1] in ("=", "+", "-", "@", "\t", "\r") and cell:
-            float(cell)  # a plain number
-        assert cell in (text, f"'{text}")
-
-
-def test_a_name_that_is_no_unicode_is_still_written():
-    table = pd.DataFrame({"reason": ["\udce9.tif"]}, dtype=object)
-    assert csv_bytes(table) == b"reason\r\n\\udce9.tif\r\n"
 
 
 def test_the_same_table_gives_the_same_bytes(study):

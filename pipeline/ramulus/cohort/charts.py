@@ -38,7 +38,19 @@ class Line:
 
 
 def number(value: float, digits: int = 3) -> str:
-    """Return a number for reading: plain between 0.001 and 10,000, else with a power of ten.
+    """Return a number for reading: plain between 0.0001 and 100,000, else with a power of ten.
+
+    Parameters
+    ----------
+    value : float
+        Any number; a dash is returned for one that is not finite.
+    digits : int
+        Significant digits.
+
+    Returns
+    -------
+    str
+        The number, with a true minus sign.
 
     Examples
     --------
@@ -183,10 +195,12 @@ def line_chart(
     ----------
     lines : sequence of Line
         Values that are not finite, or not positive on a log scale, are left out.
-    title, unit, x_label : str
+    title, unit : str
         The words.
     scale : str
         "log" or "linear".
+    x_label : str
+        The words below.
     width, height : float
         Size in pixels.
 
@@ -229,7 +243,18 @@ def _drawn_line(line: Line, across: Callable[[float], float], axis: "_Axis") -> 
 
 
 def legend(names: Sequence[str]) -> str:
-    """Draw the groups' marks with their names, as one `svg` element a group."""
+    """Draw the groups' marks with their names.
+
+    Parameters
+    ----------
+    names : sequence of str
+        The groups in their order.
+
+    Returns
+    -------
+    str
+        One `span` with an `svg` a group.
+    """
     return "".join(
         f'<span class="key"><svg width="14" height="14" aria-hidden="true">'
         f"{_mark(7, 7, k, '')}</svg> {escape(name)}</span>"

@@ -12,12 +12,12 @@ from typing import Any
 from .._cohort_settings import CohortSettings
 from .._files import write_whole
 from ..errors import UnusableInputError
+from ..network.tables import csv_bytes
 from .figures import checked_figures
 from .manifest import Manifest, ManifestRow, read_manifest
 from .page import cohort_page
 from .run import MeasureSample, Progress, run_samples
 from .study import CohortResults, gather
-from .tables import csv_bytes
 
 __all__ = ["checked_cohort", "run_cohort", "sample_folder", "write_cohort"]
 
@@ -47,8 +47,8 @@ def run_cohort(
         Measures a row into `sample_folder(out, row)` and returns that folder.
     settings : CohortSettings
         How groups are compared.
-    finished, workers, scheduler, on_progress
-        As for `run_samples`.
+    finished, workers, scheduler, on_progress : see `run_samples`
+        Passed on.
 
     Returns
     -------
@@ -102,7 +102,20 @@ def checked_cohort(path: str | Path, settings: CohortSettings) -> Manifest:
 
 
 def sample_folder(out: Path, row: ManifestRow) -> Path:
-    """Return where a sample's results belong."""
+    """Return where a sample's results belong.
+
+    Parameters
+    ----------
+    out : Path
+        The cohort's folder.
+    row : ManifestRow
+        The sample.
+
+    Returns
+    -------
+    Path
+        `samples/NAME` inside it.
+    """
     return out / "samples" / row.sample
 
 

@@ -16,8 +16,8 @@ from ..errors import UnusableInputError
 from ..quantities import Estimate, Undefined
 
 __all__ = [
+    "GroupTest",
     "Permutation",
-    "TTest",
     "comparable",
     "hedges_g",
     "hodges_lehmann",
@@ -29,7 +29,7 @@ __all__ = [
 
 
 @dataclass(frozen=True, slots=True)
-class TTest:
+class GroupTest:
     """Difference of two groups (second minus first) with its t interval and p."""
 
     estimate: float
@@ -76,7 +76,7 @@ def comparable(second: np.ndarray, batch: np.ndarray) -> np.ndarray:
 
 def welch_test(
     value: np.ndarray, second: np.ndarray, batch: np.ndarray, *, level: float = 0.95
-) -> TTest | Undefined:
+) -> GroupTest | Undefined:
     """Compare two groups without taking their spreads for equal.
 
     Least squares of value = batch + group, with the variance of MacKinnon & White 1985 (HC2, J
@@ -97,7 +97,7 @@ def welch_test(
 
     Returns
     -------
-    TTest or Undefined
+    GroupTest or Undefined
         Undefined where too few subjects are left or all residuals are zero.
 
     Examples
@@ -124,7 +124,7 @@ def welch_test(
     estimate, error = float(weights @ value), variance**0.5
     reach = float(t_law.ppf(0.5 + level / 2, df)) * error
     t = estimate / error
-    return TTest(
+    return GroupTest(
         estimate, estimate - reach, estimate + reach, t, df, float(2 * t_law.sf(abs(t), df))
     )
 

@@ -81,6 +81,18 @@ FIGURES: dict[str, Figure] = {
 def checked_figures(name: str, figures: tuple[str, ...]) -> tuple[str, ...]:
     """Return the names, each known and given once.
 
+    Parameters
+    ----------
+    name : str
+        The setting's name, for the message.
+    figures : tuple of str
+        Its value.
+
+    Returns
+    -------
+    tuple of str
+        The same.
+
     Raises
     ------
     UnusableInputError

@@ -47,8 +47,8 @@ def measure_cohort(
         goes over them. Its section `cohort` says how to compare.
     changes : sequence of str
         `section.key=value`, over all of them.
-    workers, scheduler, on_progress
-        As for `run_samples`.
+    workers, scheduler, on_progress : see `run_samples`
+        Passed on.
 
     Returns
     -------
@@ -63,6 +63,7 @@ def measure_cohort(
     out = Path(out).resolve()
     settings = load_configuration(*files, changes=changes).cohort
     manifest = checked_cohort(path, settings)
+    _refuse_edits(manifest.rows)
     configurations = _configurations(manifest.rows, files, changes)
     with locked_folder(out), write_errors(out):
         return run_cohort(
@@ -75,6 +76,17 @@ def measure_cohort(
             scheduler=scheduler,
             on_progress=on_progress,
         )
+
+
+def _refuse_edits(rows: Iterable[ManifestRow]) -> None:
+    """Edits that would be passed over in silence would make the results untrue."""
+    named = [row.sample for row in rows if row.edits is not None]
+    if named:
+        msg = (
+            f"column edits: found edits for {', '.join(named[:5])}, expected none: a measurement "
+            "replays no edits; leave the cells empty"
+        )
+        raise UnusableInputError(msg)
 
 
 def _configurations(
@@ -127,8 +139,8 @@ def finished_sample(row: ManifestRow, *, out: Path, configurations: Configuratio
 
     Parameters
     ----------
-    row, out, configurations
-        As for `measure_sample`.
+    row, out, configurations : see `measure_sample`
+        What would be measured.
 
     Returns
     -------

@@ -6,7 +6,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from ..quantities import Undefined
-from .difference import TTest, design_matrix
+from .difference import GroupTest, design_matrix
 
 __all__ = ["Spread", "mixed_model", "precision_weighted", "spread_of_stacks"]
 
@@ -88,7 +88,7 @@ def mixed_model(
     batch: np.ndarray,
     *,
     level: float = 0.95,
-) -> TTest | Undefined:
+) -> GroupTest | Undefined:
     """Fit value = batch + group + random subject to single stacks by restricted likelihood.
 
     The p and the interval use the t distribution with the degrees of freedom of the subjects, not
@@ -108,7 +108,7 @@ def mixed_model(
 
     Returns
     -------
-    TTest or Undefined
+    GroupTest or Undefined
         Undefined where each subject has one stack, or the fit does not converge.
 
     Examples
@@ -135,7 +135,7 @@ def mixed_model(
     t = estimate / error
     reach = float(t_law.ppf(0.5 + level / 2, df)) * error
     p = float(2 * t_law.sf(abs(t), df))
-    return TTest(estimate, estimate - reach, estimate + reach, t, df, p)
+    return GroupTest(estimate, estimate - reach, estimate + reach, t, df, p)
 
 
 def _fit(
@@ -166,7 +166,7 @@ def precision_weighted(
     batch: np.ndarray,
     *,
     level: float = 0.95,
-) -> TTest | Undefined:
+) -> GroupTest | Undefined:
     """Compare the groups again with each subject weighted by how well it was measured.
 
     Weights are 1 / (spread among subjects + measurement variance); the spread is the one for which
@@ -188,7 +188,7 @@ def precision_weighted(
 
     Returns
     -------
-    TTest or Undefined
+    GroupTest or Undefined
         Undefined where a standard error is missing or there are too few subjects.
 
     Examples
@@ -213,7 +213,7 @@ def precision_weighted(
     t = estimate / error
     reach = float(t_law.ppf(0.5 + level / 2, df)) * error
     p = float(2 * t_law.sf(abs(t), df))
-    return TTest(estimate, estimate - reach, estimate + reach, t, df, p)
+    return GroupTest(estimate, estimate - reach, estimate + reach, t, df, p)
 
 
 def variance_among_subjects(

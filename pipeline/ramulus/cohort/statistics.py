@@ -10,8 +10,8 @@ from .._cohort_settings import CohortSettings
 from ..errors import UnusableInputError
 from ..quantities import Estimate, Undefined
 from .difference import (
+    GroupTest,
     Permutation,
-    TTest,
     comparable,
     hedges_g,
     hodges_lehmann,
@@ -143,7 +143,9 @@ def _confounded(subjects: Values, pair: tuple[str, str]) -> str:
     return f"group and batch cannot be told apart: {'; '.join(listed)}"
 
 
-def _welch(subjects: Values, pair: tuple[str, str], settings: CohortSettings) -> TTest | Undefined:
+def _welch(
+    subjects: Values, pair: tuple[str, str], settings: CohortSettings
+) -> GroupTest | Undefined:
     if not len(subjects.value):
         return Undefined("no subject of both groups has this figure")
     second = subjects.group == pair[1]
@@ -151,7 +153,7 @@ def _welch(subjects: Values, pair: tuple[str, str], settings: CohortSettings) ->
 
 
 def _main_results(
-    subjects: Values, test: TTest, pair: tuple[str, str], alpha: float, settings: CohortSettings
+    subjects: Values, test: GroupTest, pair: tuple[str, str], alpha: float, settings: CohortSettings
 ) -> dict[str, Any]:
     second = subjects.group == pair[1]
     arrays = subjects.value, second, subjects.batch
@@ -176,7 +178,7 @@ def _main_results(
     return results
 
 
-def _shown(test: TTest, kind: str, subjects: Values) -> dict[str, float]:
+def _shown(test: GroupTest, kind: str, subjects: Values) -> dict[str, float]:
     """Return the cells of one test as printed."""
     return {
         f"estimate{kind}": subjects.shown(test.estimate),
@@ -241,7 +243,7 @@ def _second_results(
         ("_mixed", "mixed model", mixed),
         ("_weighted", "weighted", weighted),
     ):
-        if isinstance(test, TTest):
+        if isinstance(test, GroupTest):
             results |= _shown(test, kind, subjects)
         else:
             notes.append(f"{words}: {test.reason}")

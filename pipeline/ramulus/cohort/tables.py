@@ -1,16 +1,12 @@
 """Gather the samples' folders into the cohort's tables."""
 
-import csv
-import io
 import json
 import math
-import re
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
 
-import numpy as np
 import pandas as pd
 
 from ..errors import WorkFailedError
@@ -21,7 +17,6 @@ from .run import Outcome
 __all__ = [
     "SampleResults",
     "cohort_table",
-    "csv_bytes",
     "failures_table",
     "long_table",
     "read_results",
@@ -29,7 +24,6 @@ __all__ = [
 
 _AXES = ("z", "y", "x")
 _PER_AXIS = ("spacing_um", "spacing_origin", "shape")
-_NUMBER = re.compile(r"[+-]?(\d+\.?\d*|\.\d+)([eE][+-]?\d+)?|[+-]?(nan|inf)")
 _OWNER = ("sample", "subject", "group", "batch")
 _REJECT = "reject"
 
@@ -236,44 +230,3 @@ def long_table(manifest: Manifest, tables: Mapping[str, pd.DataFrame]) -> pd.Dat
     if not parts:
         return pd.DataFrame(columns=list(_OWNER))
     return pd.concat(parts, ignore_index=True)
-
-
-def csv_bytes(table: pd.DataFrame) -> bytes:
-    r"""Return a table as CSV (RFC 4180, UTF-8) in which no cell is a formula to a spreadsheet.
-
-    Numbers have as many digits as they need to be read back the same; text that begins with =, +, -
-    or @ and is no number gets an apostrophe before it.
-
-    Parameters
-    ----------
-    table : DataFrame
-        Any table; missing values become empty cells.
-
-    Returns
-    -------
-    bytes
-        The file.
-
-    Examples
-    --------
-    >>> csv_bytes(pd.DataFrame({"note": ["=1+1", "-2.5"], "x": [0.1, None]}))
-    b"note,x\r\n'=1+1,0.1\r\n-2.5,\r\n"
-    """
-    text = io.StringIO(newline="")
-    writer = csv.writer(text, lineterminator="\r\n")
-    writer.writerow([_cell(name) for name in table.columns])
-    columns = [[_cell(value) for value in table[name].tolist()] for name in table.columns]
-    writer.writerows(zip(*columns, strict=True))
-    return text.getvalue().encode("utf-8", "backslashreplace")
-
-
-def _cell(value: Any) -> str:
-    if value is None or value is pd.NA or (isinstance(value, float) and math.isnan(value)):
-        return ""
-    if isinstance(value, bool | np.bool_):
-        return str(value).lower()
-    if isinstance(value, float):
-        return repr(float(value))  # numpy's own repr names its type
-    text = str(value)
-    harmless = text[:1] not in tuple("=+-@\t\r") or not text or _NUMBER.fullmatch(text)
-    return text if harmless else f"'{text}"

@@ -58,7 +58,25 @@ class Values:
 
 
 def group_names(table: pd.DataFrame, settings: CohortSettings) -> list[str]:
-    """Return the groups, the reference first, the others as they first appear."""
+    """Return the groups, the reference first, the others as they first appear.
+
+    Parameters
+    ----------
+    table : DataFrame
+        The cohort's table.
+    settings : CohortSettings
+        The reference group.
+
+    Returns
+    -------
+    list of str
+        The groups; empty where no sample has one.
+
+    Raises
+    ------
+    UnusableInputError
+        If the reference group is not in the table.
+    """
     found = [str(name) for name in dict.fromkeys(table["group"]) if name and not pd.isna(name)]
     first = settings.reference_group
     if first and first not in found:
@@ -68,7 +86,20 @@ def group_names(table: pd.DataFrame, settings: CohortSettings) -> list[str]:
 
 
 def figures_of(table: pd.DataFrame, settings: CohortSettings) -> list[Figure]:
-    """Return the primary figures, then the others that some sample has."""
+    """Return the primary figures, then the others that some sample has.
+
+    Parameters
+    ----------
+    table : DataFrame
+        The cohort's table.
+    settings : CohortSettings
+        The primary figures.
+
+    Returns
+    -------
+    list of Figure
+        Each once.
+    """
     primary = [FIGURES[name] for name in settings.primary_figures if name in FIGURES]
     rest = [
         figure

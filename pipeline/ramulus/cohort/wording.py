@@ -17,6 +17,16 @@ __all__ = ["finding", "methods_text", "p_value", "records", "warnings_of"]
 def p_value(p: Any) -> str:
     """Return a p value for reading.
 
+    Parameters
+    ----------
+    p : float
+        A p value, or nothing.
+
+    Returns
+    -------
+    str
+        Two digits; empty where there is none.
+
     Examples
     --------
     >>> p_value(0.0123), p_value(0.00001), p_value(float("nan"))
