@@ -42,7 +42,7 @@ def light(image, z, y, x):
 
 @numba.njit(cache=True, nogil=True)
 def gather_seeds(
-    image, response, amplitude_low, amplitude_high, background, shift, ratio_low, ratio_high,
+    image, response, amplitude_low, amplitude_high, height_low, background, shift, ratio_low, ratio_high,
     z_start, z_stop, fold, number, weight, level_sum, strong,
 ):  # fmt: skip
     """Sum seeds' thresholds into cells `fold` times coarser.
@@ -67,7 +67,7 @@ def gather_seeds(
                     continue
                 base = sample_clamped(background, bz, by, (x + 0.5) * scale - 0.5)
                 height = light(image, z, y, x) - base
-                if height <= 0.0 or amplitude < ratio_low * height or amplitude > ratio_high * height:
+                if height <= height_low or amplitude < ratio_low * height or amplitude > ratio_high * height:
                     continue
                 w = amplitude * amplitude
                 weight[z // fold, y // fold, x // fold] += w

@@ -9,7 +9,7 @@ import numpy as np
 from .._settings import Settings, setting
 from ..errors import UnusableInputError
 from . import _segment_kernels as kernels
-from .background import BackgroundSettings, background_map
+from .background import BackgroundSettings, background_map, noise_sd
 from .enhance import TubeMap
 from .grid import in_threads
 from .mask import Mask
@@ -17,6 +17,7 @@ from .mask import Mask
 __all__ = ["SegmentSettings", "Segmented", "segment"]
 
 _NOWHERE = np.float32(-1e30)
+_CLEAR_OF_NOISE = 3.0
 _RIVAL = 1.25  # a finer scale this many times stronger takes the place
 
 
@@ -132,6 +133,7 @@ def _seed_fields(tubes, base, base_level, reference, settings):  # noqa: ANN001,
     fields, total = {}, 0
     finer: np.ndarray | None = None
     half_shape = tubes.levels[1].image.shape
+    voxel_noise = noise_sd(tubes.levels[0].image)
     strong = np.zeros(half_shape, bool)
     for k, response in enumerate(tubes.response):
         if finer is not None:
@@ -147,11 +149,14 @@ def _seed_fields(tubes, base, base_level, reference, settings):  # noqa: ANN001,
         weight, level_sum = np.zeros(shape, np.float32), np.zeros(shape, np.float32)
         planes = np.minimum(np.arange(level.image.shape[0]) << k, len(reference) - 1)
         relative = settings.contrast_min * reference[planes]
-        low = np.maximum(relative, math.e * 4.0 * noise).astype(np.float32)
+        # A threshold must stand clear of the noise of the lightly smoothed image that it is held
+        # against (1 2 1 along three axes leaves 0.23 of white noise, each level another 8**-0.5).
+        clear = 2 * _CLEAR_OF_NOISE * 0.23 * voxel_noise * 8.0 ** (-0.5 * (max(k, 1) - 1))
+        low = np.maximum(np.maximum(relative, math.e * 4.0 * noise), clear).astype(np.float32)
         high = np.maximum(relative, math.e * settings.noise_factor_high * noise).astype(np.float32)
         marks = np.zeros(shape, bool)
         total += kernels.gather_seeds(
-            level.image, won, low, high, base, base_level - k, 0.25, 2.5,
+            level.image, won, low, high, np.float32(clear), base, base_level - k, 0.25, 2.5,
             0, level.image.shape[0], fold, k, weight, level_sum, marks,
         )  # fmt: skip
         _mark_strong(strong, marks, max(k, 1) - 1)
