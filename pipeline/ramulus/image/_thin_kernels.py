@@ -364,7 +364,7 @@ def accept_tips(
             needed = protrusion * max(ball, 2.0 * own)
             if run + radius[tip] - ball > needed:
                 wall = wall_beside(
-                    base, position_um[tip], 2.0 * own, start, neighbour, position_um, marked,
+                    base, tip, 2.0 * own, start, neighbour, position_um, marked,
                     inside, spacing_um, queue, walls,
                 )  # fmt: skip
                 accepted[k] = run + radius[tip] - max(ball, wall) > needed
@@ -381,7 +381,7 @@ _NEARBY = 64
 
 @numba.njit(cache=True, nogil=True)
 def wall_beside(
-    base, tip_um, apart, start, neighbour, position_um, marked, inside, spacing_um, queue, walls
+    base, tip, apart, start, neighbour, position_um, marked, inside, spacing_um, queue, walls
 ):
     """Distance from the marked line to the wall in the direction of a tip, beside its base.
 
@@ -398,14 +398,16 @@ def wall_beside(
         at += 1
         away = _distance(position_um, i, base)
         if away > apart:
-            off = position_um[i] - position_um[base]
-            if found[0] == 0:
-                side[:] = off
-            which = 0 if (off * side).sum() >= 0.0 else 1
+            along = 0.0
+            for axis in range(3):
+                off = position_um[i, axis] - position_um[base, axis]
+                if found[0] == 0:
+                    side[axis] = off
+                along += off * side[axis]
+            which = 0 if along >= 0.0 else 1
             if found[which] < _NEARBY:
-                walls[which, found[which]] = _ray(
-                    inside, position_um[i], tip_um - position_um[base], spacing_um
-                )
+                wall = _ray(inside, position_um, i, base, tip, spacing_um)
+                _insert(walls[which], found[which], wall)
                 found[which] += 1
         if away > 2.0 * apart:
             continue
@@ -421,25 +423,36 @@ def wall_beside(
     for which in range(2):
         n = found[which]
         if n > 0:
-            walls[which, :n].sort()
             middle = walls[which, (n - 1) // 2]
             least = middle if which == 0 else min(least, middle)
     return least
 
 
 @numba.njit(cache=True, nogil=True)
-def _ray(inside, from_um, towards_um, spacing_um):
-    """Distance from a place to the lumen's wall, no further than the length of `towards_um`."""
-    length = np.sqrt((towards_um**2).sum())
-    stride = 0.5 * spacing_um.min()
+def _insert(values, count, value):
+    """Put a value in its place among `count` sorted ones."""
+    k = count
+    while k > 0 and values[k - 1] > value:
+        values[k] = values[k - 1]
+        k -= 1
+    values[k] = value
+
+
+@numba.njit(cache=True, nogil=True)
+def _ray(inside, position_um, i, base, tip, spacing_um):
+    """Distance from voxel i to the wall in the direction from base to tip, no further than that."""
+    length = _distance(position_um, base, tip)
+    stride = 0.5 * min(spacing_um[0], spacing_um[1], spacing_um[2])
     travelled = 0.0
+    place = np.empty(3, dtype=np.int64)
     while travelled < length:
-        z = int(np.rint((from_um[0] + travelled / length * towards_um[0]) / spacing_um[0]))
-        y = int(np.rint((from_um[1] + travelled / length * towards_um[1]) / spacing_um[1]))
-        x = int(np.rint((from_um[2] + travelled / length * towards_um[2]) / spacing_um[2]))
-        if not (0 <= z < inside.shape[0] and 0 <= y < inside.shape[1]):
-            break
-        if not (0 <= x < inside.shape[2] and inside[z, y, x]):
+        within = True
+        for axis in range(3):
+            step = (position_um[tip, axis] - position_um[base, axis]) / length
+            at = (position_um[i, axis] + travelled * step) / spacing_um[axis]
+            place[axis] = int(np.floor(at + 0.5))
+            within = within and 0 <= place[axis] < inside.shape[axis]
+        if not within or not inside[place[0], place[1], place[2]]:
             break
         travelled += stride
     return travelled
@@ -505,14 +518,19 @@ def run_out(inside, words, end_um, direction_um, radius_um, spacing_um, row_word
     """
     added = np.empty(64, dtype=np.int64)
     count = 0
-    stride = 0.5 * spacing_um.min()
+    stride = 0.5 * min(spacing_um[0], spacing_um[1], spacing_um[2])
+    unit = np.empty(3)
     for k in range(len(end_um)):
-        unit = direction_um[k] / np.sqrt((direction_um[k] ** 2).sum())
+        square = 0.0
+        for axis in range(3):
+            square += direction_um[k, axis] ** 2
+        for axis in range(3):
+            unit[axis] = direction_um[k, axis] / np.sqrt(square)
         last = np.int64(-1)
         for step in range(int(3.0 * radius_um[k] / stride) + 1):
-            z = int(np.rint((end_um[k, 0] + step * stride * unit[0]) / spacing_um[0]))
-            y = int(np.rint((end_um[k, 1] + step * stride * unit[1]) / spacing_um[1]))
-            x = int(np.rint((end_um[k, 2] + step * stride * unit[2]) / spacing_um[2]))
+            z = int(np.floor((end_um[k, 0] + step * stride * unit[0]) / spacing_um[0] + 0.5))
+            y = int(np.floor((end_um[k, 1] + step * stride * unit[1]) / spacing_um[1] + 0.5))
+            x = int(np.floor((end_um[k, 2] + step * stride * unit[2]) / spacing_um[2] + 0.5))
             if not (0 <= z < inside.shape[0] and 0 <= y < inside.shape[1]):
                 break
             if not (0 <= x < inside.shape[2] and inside[z, y, x]):
@@ -529,7 +547,10 @@ def run_out(inside, words, end_um, direction_um, radius_um, spacing_um, row_word
                 break
             words[address >> 5] = np.uint32(np.int64(words[address >> 5]) | (1 << (address & 31)))
             if count == len(added):
-                added = np.append(added, np.empty(count, dtype=np.int64))
+                longer = np.empty(2 * count, dtype=np.int64)
+                for i in range(count):
+                    longer[i] = added[i]
+                added = longer
             added[count] = address
             count += 1
     return added[:count]

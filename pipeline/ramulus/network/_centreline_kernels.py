@@ -11,8 +11,10 @@ def smooth_lines(points, values, offsets, scale, slack, limit, step, capacity, o
     `scale` is the voxel's edge along each axis, `slack` the RMS residual allowed in voxels. Returns
     how many points each segment got.
     """
-    finest = scale.min()
-    strengths = (scale / finest) ** 2
+    finest = min(scale[0], scale[1], scale[2])
+    strengths = np.empty(3)
+    for axis in range(3):
+        strengths[axis] = (scale[axis] / finest) ** 2
     counts = np.empty(len(offsets) - 1, dtype=np.int64)
     for i in range(len(counts)):
         first, stop = offsets[i], offsets[i + 1]
@@ -21,8 +23,10 @@ def smooth_lines(points, values, offsets, scale, slack, limit, step, capacity, o
         smooth_to_slack(even, np.ones(len(even)), scale, strengths, slack, limit, line)
         line, line_values = evenly_spaced(line, even_values, step, 2)
         counts[i] = len(line)
-        out[capacity[i] : capacity[i] + len(line)] = line
-        out_values[capacity[i] : capacity[i] + len(line)] = line_values
+        for k in range(len(line)):
+            out_values[capacity[i] + k] = line_values[k]
+            for axis in range(3):
+                out[capacity[i] + k, axis] = line[k, axis]
     return counts
 
 
@@ -48,7 +52,8 @@ def evenly_spaced(points, values, step, least):
         for axis in range(3):
             even[k, axis] = points[j, axis] * (1.0 - share) + points[j + 1, axis] * share
         even_values[k] = values[j] * (1.0 - share) + values[j + 1] * share
-    even[0], even[count - 1] = points[0], points[n - 1]
+    for axis in range(3):
+        even[0, axis], even[count - 1, axis] = points[0, axis], points[n - 1, axis]
     return even, even_values
 
 
@@ -63,12 +68,14 @@ def smooth_to_slack(points, weight, scale, strengths, slack, limit, out):
     """
     n = len(points)
     if n < 4:
-        out[:, :] = points
+        for i in range(n):
+            for axis in range(3):
+                out[i, axis] = points[i, axis]
         return
     low, high = 0.0, limit
     factor = limit
     for turn in range(_TURNS):
-        _penalised(points, weight, factor * strengths, out)
+        _penalised(points, weight, factor, strengths, out)
         if _residual(points, out, weight, scale) <= slack:
             low = factor
             if turn == 0:
@@ -76,12 +83,16 @@ def smooth_to_slack(points, weight, scale, strengths, slack, limit, out):
         else:
             high = factor
         factor = np.sqrt(max(low, 1e-3) * high)
-    _penalised(points, weight, low * strengths, out)
-    left, part = np.empty_like(points), np.empty_like(points)
+    _penalised(points, weight, low, strengths, out)
+    left, part = np.empty((n, 3)), np.empty((n, 3))
     for _ in range(2):
-        left[:, :] = points - out
-        _penalised(left, weight, low * strengths, part)
-        out += part
+        for i in range(n):
+            for axis in range(3):
+                left[i, axis] = points[i, axis] - out[i, axis]
+        _penalised(left, weight, low, strengths, part)
+        for i in range(n):
+            for axis in range(3):
+                out[i, axis] += part[i, axis]
 
 
 _TURNS = 16
@@ -90,14 +101,16 @@ _TURNS = 16
 @numba.njit(cache=True, nogil=True)
 def _residual(points, line, weight, scale):
     """Weighted RMS distance of a line from its points, in units of `scale` along each axis."""
-    square = 0.0
-    for axis in range(3):
-        square += (weight * ((line[:, axis] - points[:, axis]) / scale[axis]) ** 2).sum()
-    return np.sqrt(square / weight.sum())
+    square, total = 0.0, 0.0
+    for i in range(len(points)):
+        total += weight[i]
+        for axis in range(3):
+            square += weight[i] * ((line[i, axis] - points[i, axis]) / scale[axis]) ** 2
+    return np.sqrt(square / total)
 
 
 @numba.njit(cache=True, nogil=True)
-def _penalised(points, weight, strengths, out):
+def _penalised(points, weight, factor, strengths, out):
     """Minimise sum w (x - p)^2 + strength * sum (second difference)^2 per axis, both ends held.
 
     Whittaker 1923, Proc Edinburgh Math Soc 41:63-75. The matrix has five diagonals; it is factored
@@ -106,10 +119,10 @@ def _penalised(points, weight, strengths, out):
     n = len(points)
     m = n - 2
     pivot, near, far, right = np.empty(m), np.empty(m), np.empty(m), np.empty(m)
-    out[0], out[n - 1] = points[0], points[n - 1]
     for axis in range(3):
-        strength = strengths[axis]
-        if axis == 0 or strength != strengths[axis - 1]:
+        out[0, axis], out[n - 1, axis] = points[0, axis], points[n - 1, axis]
+        strength = factor * strengths[axis]
+        if axis == 0 or strengths[axis] != strengths[axis - 1]:
             _factor(weight, strength, pivot, near, far)
         for i in range(m):
             right[i] = weight[i + 1] * points[i + 1, axis]
