@@ -1,62 +1,113 @@
 """Bifurcation angles in space, and those that the radii make optimal."""
 
 import numpy as np
+from numpy.typing import ArrayLike
 
 from ..network.graph import CentrelineGraph
 
-__all__ = ["leaving_directions", "optimal_angles_deg"]
+__all__ = ["bifurcation_angles_deg", "leaving_directions", "optimal_angles_deg"]
+
+_SAMPLES = 9
+_BATCH = 20_000
 
 
-def leaving_directions(graph: CentrelineGraph, radius_um: np.ndarray) -> np.ndarray:
-    """(2 m, 3) unit vectors in which each segment leaves its two nodes (NaN where too short).
-
-    The main axis of the centreline's points between one and three radii of the widest vessel at the
-    node, at least four points. Row 2 i + side is segment i at that side.
+def bifurcation_angles_deg(
+    graph: CentrelineGraph,
+    node: np.ndarray,
+    parent: np.ndarray,
+    daughters: np.ndarray,
+    reach_um: np.ndarray,
+) -> tuple[np.ndarray, np.ndarray]:
+    """Return the angle between each daughter and the parent's axis carried on, in three dimensions.
 
     Parameters
     ----------
-    radius_um : (m,) array
-        Mean radius of each segment.
+    graph : CentrelineGraph
+        The network.
+    node, parent : (n,) int arrays
+        Junction nodes and the segment that brings to each; -1: none.
+    daughters : (n, k) int array
+        Segments that leave, -1 beyond the last.
+    reach_um : (n,) array
+        The parent's radius r0: directions are taken from r0 to 3 r0.
+
+    Returns
+    -------
+    angle, se : (n, k) arrays
+        Degrees, and the standard error by jackknife over the samples along the vessels, NaN where a
+        vessel has no direction.
     """
-    ends = graph.segment_nodes.ravel()
-    widest = np.zeros(graph.n_nodes)
-    np.maximum.at(widest, ends, np.repeat(np.nan_to_num(radius_um), 2))
-    arc, per = graph.arc_um(), graph.points_per_segment
-    length = graph.segment_length_um()
-    out = np.full((2 * graph.n_segments, 3), np.nan)
-    segment = graph.point_segment
-    for side in (0, 1):
-        along = arc if side == 0 else np.repeat(length, per) - arc
-        unit = widest[graph.segment_nodes[:, side]]
-        near = np.minimum(unit, 0.4 * length)
-        far = np.maximum(np.minimum(3 * unit, length), near + 0.4 * length)
-        chosen = (along >= np.repeat(near, per)) & (along <= np.repeat(far, per))
-        count = np.bincount(segment[chosen], minlength=graph.n_segments)
-        mean = np.stack([
-            np.bincount(segment[chosen], weights=graph.point_position_um[chosen, a], minlength=graph.n_segments)
-            for a in range(3)
-        ], axis=1) / np.maximum(count, 1)[:, None]  # fmt: skip
-        left = graph.point_position_um[chosen] - mean[segment[chosen]]
-        along_left = along[chosen] - (
-            np.bincount(segment[chosen], weights=along[chosen], minlength=graph.n_segments)
-            / np.maximum(count, 1)
-        )[segment[chosen]]
-        # Regression of position on arc length: its slope is the direction.
-        slope = np.stack([
-            np.bincount(segment[chosen], weights=left[:, a] * along_left, minlength=graph.n_segments)
-            for a in range(3)
-        ], axis=1)  # fmt: skip
-        norm = np.linalg.norm(slope, axis=1)
-        good = (count >= 4) & (norm > 0)
-        out[2 * np.flatnonzero(good) + side] = slope[good] / norm[good][:, None]
+    angle = np.full(daughters.shape, np.nan)
+    se = np.full(daughters.shape, np.nan)
+    for start in range(0, len(node), _BATCH):
+        rows = slice(start, min(start + _BATCH, len(node)))
+        onward = -leaving_directions(graph, parent[rows], node[rows], reach_um[rows])
+        for k in range(daughters.shape[1]):
+            leave = leaving_directions(graph, daughters[rows, k], node[rows], reach_um[rows])
+            every = np.degrees(np.arccos(np.clip(np.sum(onward * leave, axis=2), -1, 1)))
+            angle[rows, k] = every[:, 0]
+            left = every[:, 1:] - every[:, 1:].mean(axis=1, keepdims=True)
+            se[rows, k] = np.sqrt((_SAMPLES - 1) / _SAMPLES * np.sum(left**2, axis=1))
+    return angle, se
+
+
+def leaving_directions(
+    graph: CentrelineGraph, segment: np.ndarray, node: np.ndarray, reach_um: np.ndarray
+) -> np.ndarray:
+    """Return unit vectors in which segments leave a node.
+
+    The slope of the centreline's position on arc length from one to three `reach_um` off the node;
+    in a shorter vessel over what there is of that, at least two fifths of its length.
+
+    Parameters
+    ----------
+    graph : CentrelineGraph
+        The network.
+    segment : (n,) int array
+        Segments; -1: none.
+    node : (n,) int array
+        The end that each leaves.
+    reach_um : (n,) array
+        Radius of the junction's lumen.
+
+    Returns
+    -------
+    (n, 1 + samples, 3) array
+        The direction, then the directions with one sample left out in turn; NaN where there is
+        none.
+    """
+    fraction, position = _sampled(graph, segment, node, reach_um)
+    out = np.full((len(segment), 1 + _SAMPLES, 3), np.nan)
+    for left_out in range(-1, _SAMPLES):
+        kept = np.arange(_SAMPLES) != left_out
+        x = fraction[kept] - fraction[kept].mean()
+        slope = np.einsum("s,nsa->na", x, position[:, kept])
+        norm = np.linalg.norm(slope, axis=1, keepdims=True)
+        with np.errstate(invalid="ignore", divide="ignore"):
+            out[:, left_out + 1] = np.where(norm > 0, slope / norm, np.nan)
     return out
 
 
-def optimal_angles_deg(parent_um: np.ndarray, first_um: np.ndarray, second_um: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
-    """Angles of both daughters to the parent's axis that minimise lumen volume (Murray 1926).
+def optimal_angles_deg(
+    parent_um: ArrayLike, first_um: ArrayLike, second_um: ArrayLike, *, power: float = 2.0
+) -> tuple[np.ndarray, np.ndarray]:
+    """Return the angles of both daughters to the parent's axis that cost least.
 
-    cos t1 = (a0**4 + a1**4 - a2**4) / (2 a0**2 a1**2), t2 likewise (J Gen Physiol 9:835). NaN where no
-    such angle exists.
+    With a cost w = a**power per length, cos t1 = (w0^2 + w1^2 - w2^2) / (2 w0 w1), t2 likewise.
+    Power 2 is that of lumen volume and of Murray's whole cost (Murray 1926, J Gen Physiol 9:835), 1
+    of wall surface.
+
+    Parameters
+    ----------
+    parent_um, first_um, second_um : array_like
+        Radii.
+    power : float
+        Power of the radius in the cost per length.
+
+    Returns
+    -------
+    first, second : arrays
+        Degrees; NaN where no angle balances the three.
 
     Examples
     --------
@@ -64,10 +115,38 @@ def optimal_angles_deg(parent_um: np.ndarray, first_um: np.ndarray, second_um: n
     >>> round(float(t1), 3)
     37.467
     """
-    a0, a1, a2 = (np.asarray(r, dtype=float) ** 2 for r in (parent_um, first_um, second_um))
+    w0, w1, w2 = (
+        np.asarray(r, dtype=np.float64) ** power for r in (parent_um, first_um, second_um)
+    )
     with np.errstate(invalid="ignore", divide="ignore"):
-        c1 = (a0**2 + a1**2 - a2**2) / (2 * a0 * a1)
-        c2 = (a0**2 + a2**2 - a1**2) / (2 * a0 * a2)
+        c1 = (w0**2 + w1**2 - w2**2) / (2 * w0 * w1)
+        c2 = (w0**2 + w2**2 - w1**2) / (2 * w0 * w2)
         # Rounding may carry the cosine of a zero angle past one.
         c1, c2 = (np.where(np.abs(c) <= 1 + 1e-12, np.clip(c, -1, 1), np.nan) for c in (c1, c2))
         return np.degrees(np.arccos(c1)), np.degrees(np.arccos(c2))
+
+
+def _sampled(
+    graph: CentrelineGraph, segment: np.ndarray, node: np.ndarray, reach_um: np.ndarray
+) -> tuple[np.ndarray, np.ndarray]:
+    """Positions at evenly spaced arc lengths off the node, and where they lie between 0 and 1."""
+    if not graph.n_segments:
+        return np.linspace(0, 1, _SAMPLES), np.full((len(segment), _SAMPLES, 3), np.nan)
+    fraction = np.linspace(0, 1, _SAMPLES)
+    total = np.cumsum(graph.step_um())
+    first, last = graph.point_offsets[segment], graph.point_offsets[segment + 1] - 1
+    length = total[last] - total[first]
+    reach = np.nan_to_num(reach_um)
+    near = np.minimum(reach, 0.4 * length)
+    far = np.maximum(np.minimum(3 * reach, length), near + 0.4 * length)
+    along = near[:, None] + (far - near)[:, None] * fraction
+    at_end = graph.segment_nodes[segment, 0] != node
+    target = total[first][:, None] + np.where(at_end[:, None], length[:, None] - along, along)
+    place = np.searchsorted(total, target, side="right") - 1
+    place = np.clip(place, first[:, None], last[:, None] - 1)
+    step = total[place + 1] - total[place]
+    share = np.clip((target - total[place]) / np.where(step > 0, step, 1.0), 0.0, 1.0)
+    before, after = graph.point_position_um[place], graph.point_position_um[place + 1]
+    position = before + share[..., None] * (after - before)
+    known = (segment >= 0) & (length > 0) & np.isfinite(reach_um)
+    return fraction, np.where(known[:, None, None], position, np.nan)
