@@ -1,6 +1,6 @@
 """Cleaning of the raw graph by rules without a scale of their own; every change is recorded.
 
-In this order: vessels that merely touch are parted; then, until nothing changes, junctions inside
+In this order: specks without length go; vessels that merely touch are parted; then, until nothing changes, junctions inside
 one inscribed ball become one, rings smaller than the vessel's circumference and spurs go, series
 segments are joined; gaps are bridged and the second step is done again; small parts go. Lengths are
 judged by the distance map's radius there.
@@ -140,6 +140,7 @@ def clean(
     (1, [('remove', 'spur')])
     """
     work = _Work(graph, settings or CleanSettings(), contrast_at, origin_um, [])
+    work.drop_lone_nodes()
     work.part_contacts()
     work.settle()
     if work.bridge_gaps():
@@ -158,6 +159,15 @@ class _Work:
     contrast_at: Sampler | None
     origin_um: Sequence[float]
     edits: list[Edit]
+
+    def drop_lone_nodes(self) -> None:
+        """Drop nodes without a segment: specks of the mask that thinning left a voxel of."""
+        lone = np.flatnonzero(self.graph.node_degree() == 0)
+        for node in lone:
+            place = self.graph.node_position_um[node]
+            self.note("remove", "part", place, "speck without length", length_um=0.0)
+        if len(lone):
+            self.graph = self.graph.select_segments(np.arange(self.graph.n_segments))
 
     def part_contacts(self) -> None:
         """Part vessels that run past one another and only touch."""
@@ -317,8 +327,8 @@ class _Work:
         radius = weighted / np.maximum(length, 1e-12)
         crossing = np.bincount(part, graph.node_kind == _BORDER, count) >= 2
         small = ~crossing & (length < 2 * s.part_length_diameters * radius)
-        small |= (length <= 0) | (length < s.part_length_share * length.max(initial=0.0))
-        if length.any():
+        small |= length < s.part_length_share * length.max(initial=0.0)
+        if count:
             small[np.argmax(length)] = False
         places = graph.node_position_um[np.unique(part, return_index=True)[1]]
         for k in np.flatnonzero(small):

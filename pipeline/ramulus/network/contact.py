@@ -161,11 +161,11 @@ def _narrow_neck(
     place = graph.point_position_um[points][narrowest]
     reason = f"neck of {inside[narrowest]:.3g} um, vessels of {radii[0]:.3g} and {radii[1]:.3g} um"
     if contrast_at is not None:
-        ends = graph.node_position_um[graph.segment_nodes[segment]]
-        values = np.asarray(contrast_at(np.concatenate((place[None], ends))))
-        if values[0] >= _GREY_DIP * values[1:].min():
+        values = np.asarray(contrast_at(graph.point_position_um[points]))
+        share = float(values[1:-1].min(initial=np.inf) / max(values[[0, -1]].min(), 1e-12))
+        if share >= _GREY_DIP:
             return None
-        reason += f", grey falls to {values[0] / max(values[1:].min(), 1e-12):.0%}"
+        reason += f", grey falls to {share:.0%}"
     return Contact(segment, int(graph.segment_nodes[segment, 0]), (), place, place, reason)
 
 
