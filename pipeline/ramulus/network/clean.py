@@ -1,9 +1,9 @@
 """Cleaning of the raw graph by rules without a scale of their own; every change is recorded.
 
-In this order: specks without length go; vessels that merely touch are parted; then, until nothing changes, junctions inside
-one inscribed ball become one, rings smaller than the vessel's circumference and spurs go, series
-segments are joined; gaps are bridged and the second step is done again; small parts go. Lengths are
-judged by the distance map's radius there.
+In this order: specks without length go; vessels that merely touch are parted; then, until nothing
+changes, junctions inside one inscribed ball become one, rings smaller than the vessel's
+circumference and spurs go, series segments are joined; gaps are bridged and the last step is done
+again; small parts go. Lengths are judged by the distance map's radius there.
 """
 
 from collections.abc import Callable, Sequence
