@@ -1,0 +1,6 @@
+"""Run the commands: python -m ramulus."""
+
+from .cli import main
+
+if __name__ == "__main__":
+    main()
