@@ -57,7 +57,7 @@ def leaving_directions(
     """Return unit vectors in which segments leave a node.
 
     The slope of the centreline's position on arc length from one to three `reach_um` off the node;
-    in a shorter vessel over what there is of that, at least two fifths of its length.
+    a vessel shorter than 2.5 of them is taken over its far three fifths.
 
     Parameters
     ----------
@@ -134,11 +134,12 @@ def _sampled(
         return np.linspace(0, 1, _SAMPLES), np.full((len(segment), _SAMPLES, 3), np.nan)
     fraction = np.linspace(0, 1, _SAMPLES)
     total = np.cumsum(graph.step_um())
+    there, segment = segment >= 0, np.maximum(segment, 0)
     first, last = graph.point_offsets[segment], graph.point_offsets[segment + 1] - 1
     length = total[last] - total[first]
     reach = np.nan_to_num(reach_um)
     near = np.minimum(reach, 0.4 * length)
-    far = np.maximum(np.minimum(3 * reach, length), near + 0.4 * length)
+    far = np.minimum(3 * reach, length)
     along = near[:, None] + (far - near)[:, None] * fraction
     at_end = graph.segment_nodes[segment, 0] != node
     target = total[first][:, None] + np.where(at_end[:, None], length[:, None] - along, along)
@@ -148,5 +149,5 @@ def _sampled(
     share = np.clip((target - total[place]) / np.where(step > 0, step, 1.0), 0.0, 1.0)
     before, after = graph.point_position_um[place], graph.point_position_um[place + 1]
     position = before + share[..., None] * (after - before)
-    known = (segment >= 0) & (length > 0) & np.isfinite(reach_um)
+    known = there & (length > 0) & np.isfinite(reach_um)
     return fraction, np.where(known[:, None, None], position, np.nan)

@@ -12,7 +12,7 @@ junctions,
 with s the standard errors of ln radius: mu is the bias of h to second order and v its variance;
 tau^2 is the scatter between junctions beyond the radius errors (Paule and Mandel 1982, J Res NBS
 87:377, on clipped z); psi clips at 2 (Huber 1964, Ann Math Stat 35:73). The interval holds the
-exponents at which the mean of psi, in its own standard errors, is within Student's t; the test of
+exponents at which the mean of psi, in its standard errors, is within Student's t; the test of
 the cube law is the same statistic at 3. Neighbouring junctions share a vessel, whose error enters
 once with either sign: taking them for independent makes the interval a little too wide.
 """
@@ -34,6 +34,7 @@ _LOW, _HIGH = 0.05, 30.0
 _CLIP = 2.0
 _CLIPPED_SQUARE = 0.9205  # E min(z^2, 4) of a standard normal z
 _FEWEST = 3
+_FLOOR = 1e-12  # of the variance: a millionth of a radius, below any error and above rounding
 
 
 @dataclass(frozen=True, slots=True)
@@ -261,17 +262,15 @@ _Data = tuple[np.ndarray, np.ndarray, np.ndarray, np.ndarray]
 
 def _clipped(g: float, data: _Data, tau2: float) -> np.ndarray:
     h, mu, variance = bias_and_variance(g, *data)
-    # The floor lets exact radii through: far below any error, far above rounding.
-    return np.asarray(np.clip((h - mu) / np.sqrt(variance + tau2 + 1e-18), -_CLIP, _CLIP))
+    return np.asarray(np.clip((h - mu) / np.sqrt(variance + tau2 + _FLOOR), -_CLIP, _CLIP))
 
 
 def _statistic(g: float, data: _Data, tau2: float) -> float:
     """Mean of the clipped deviates in its own standard errors; it falls with g."""
     psi = _clipped(g, data, tau2)
-    mean, sd = float(np.mean(psi)), float(np.std(psi, ddof=1))
-    if sd < 1e-12:
-        return 0.0 if abs(mean) < 1e-6 else float(np.copysign(1e9, mean))
-    return mean / sd * float(np.sqrt(len(psi)))
+    # Never less than the errors say: few junctions may agree by luck, exact radii up to rounding.
+    spread = max(float(np.std(psi, ddof=1)), _CLIPPED_SQUARE**0.5)
+    return float(np.mean(psi)) / spread * float(np.sqrt(len(psi)))
 
 
 def _crossing(data: _Data, tau2: float, wanted: float) -> float:
@@ -292,12 +291,12 @@ def _scatter(g: float, data: _Data) -> float:
     left = (h - mu) ** 2
 
     def excess(tau2: float) -> float:
-        z2 = np.minimum(left / (variance + tau2 + 1e-300), _CLIP**2)
+        z2 = np.minimum(left / (variance + tau2 + _FLOOR), _CLIP**2)
         return float(np.sum(z2)) - _CLIPPED_SQUARE * (len(h) - 1)
 
     if excess(0.0) <= 0:
         return 0.0
-    low, high = 0.0, float(left.max()) + 1e-300
+    low, high = 0.0, float(left.max())
     while excess(high) > 0:
         high *= 4
     for _ in range(60):

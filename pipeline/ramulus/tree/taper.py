@@ -57,8 +57,8 @@ def fit_taper(
 def trunk_segments(rooting: Rooting, radius_um: np.ndarray, root: int) -> list[int]:
     """Return the segments of the trunk: the main stem from a root to a tip.
 
-    The stem goes on into the daughter of the highest Strahler order, among equals the widest (Horton
-    1945): a wide stub does not end it.
+    The stem goes on into the daughter of the highest Strahler order, among equals the widest
+    (Horton 1945): a wide stub does not end it.
 
     Parameters
     ----------
