@@ -23,12 +23,12 @@ class BitGrid:
 
     @property
     def row_words(self) -> int:
-        """Number of 32-bit words that a row takes."""
+        """Number of words of 32 voxels that a row takes."""
         return (self.shape[2] + 2 + 31) // 32
 
     @property
     def plane_words(self) -> int:
-        """Number of 32-bit words that a plane takes."""
+        """Number of words that a plane takes."""
         return self.row_words * (self.shape[1] + 2)
 
     def address(self, linear: np.ndarray) -> np.ndarray:
@@ -51,8 +51,8 @@ class BitGrid:
         return linear
 
     def words(self, address: np.ndarray) -> np.ndarray:
-        """Return a volume of bits, as 32-bit words, in which these voxels are set."""
-        words = np.zeros(self.plane_words * (self.shape[0] + 2) + 1, dtype=np.uint32)
+        """Return a volume of bits (see `_thin_kernels`) in which these voxels are set."""
+        words = np.zeros(self.plane_words * (self.shape[0] + 2) + 1, dtype=np.int64)
         set_bits(words, address)
         return words
 

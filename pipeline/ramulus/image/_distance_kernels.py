@@ -10,6 +10,23 @@ import numpy as np
 
 
 @numba.njit(cache=True, nogil=True)
+def rows_of(linear, rows, nx):
+    """Column of each voxel, given by rising place in the flattened volume, and each row's start."""
+    column = np.empty(len(linear), dtype=np.int32)
+    row_start = np.empty(rows + 1, dtype=np.int64)
+    row = 0
+    row_start[0] = 0
+    for i in range(len(linear)):
+        while linear[i] >= (row + 1) * nx:
+            row += 1
+            row_start[row] = i
+        column[i] = linear[i] - row * nx
+    for later in range(row + 1, rows + 1):
+        row_start[later] = len(linear)
+    return column, row_start
+
+
+@numba.njit(cache=True, nogil=True)
 def square_along_rows(column, row_start, nx, spacing, squared):
     """First pass, along x: the squared distance to the nearest gap in the voxel's own row."""
     for row in range(len(row_start) - 1):

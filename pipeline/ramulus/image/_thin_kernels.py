@@ -1,8 +1,10 @@
 """Kernels of the thinning: voxels as single bits, removed one by one in a given order.
 
-A volume is an array of 32-bit words, one bit a voxel, padded by an empty voxel all round. A voxel's
-address is its bit number; the row above, below, before and behind lie at fixed word distances, so a
-neighbourhood of 27 bits comes from nine pairs of words and no coordinate is ever computed.
+A volume is padded by an empty voxel all round and held in words of 32 voxels each. A word also
+repeats the voxel before its first and the one after its last, so that any voxel and its two
+neighbours along x lie in one word (bits 0 to 33 of 64). A voxel's address is its number in this
+layout; the rows beside, above and below lie at fixed word distances, so a neighbourhood of 27 bits
+comes from nine words and no coordinate is ever computed.
 """
 
 import heapq
@@ -108,21 +110,40 @@ def address_of(linear, ny, nx, row_bits):
 def set_bits(words, addresses):
     """Set the bits at these addresses."""
     for address in addresses:
-        words[address >> 5] = np.uint32(np.int64(words[address >> 5]) | (1 << (address & 31)))
+        _set_bit(words, address)
+
+
+@numba.njit(cache=True, nogil=True)
+def _set_bit(words, address):
+    word, place = address >> 5, address & 31
+    words[word] |= 2 << place
+    if place == 0:
+        words[word - 1] |= 1 << 33
+    elif place == 31:
+        words[word + 1] |= 1
+
+
+@numba.njit(cache=True, nogil=True)
+def _clear_bit(words, address):
+    word, place = address >> 5, address & 31
+    words[word] &= ~(2 << place)
+    if place == 0:
+        words[word - 1] &= ~(1 << 33)
+    elif place == 31:
+        words[word + 1] &= ~1
 
 
 @numba.njit(cache=True, nogil=True)
 def neighbourhood(words, address, row_words, plane_words):
     """27 bits round a voxel, bit 9 dz + 3 dy + dx."""
-    corner = address - 1
-    word = (corner >> 5) - plane_words - row_words
-    shift = corner & 31
+    shift = address & 31
     code = 0
+    word = (address >> 5) - plane_words - row_words
     for dz in range(3):
-        for dy in range(3):
-            at = word + dz * plane_words + dy * row_words
-            pair = np.int64(words[at]) | ((np.int64(words[at + 1]) & 3) << 32)
-            code |= ((pair >> shift) & 7) << (9 * dz + 3 * dy)
+        at = word + dz * plane_words
+        code |= ((words[at] >> shift) & 7) << (9 * dz)
+        code |= ((words[at + row_words] >> shift) & 7) << (9 * dz + 3)
+        code |= ((words[at + 2 * row_words] >> shift) & 7) << (9 * dz + 6)
     return code
 
 
@@ -208,16 +229,41 @@ def _count_bits(code):
 
 
 @numba.njit(cache=True, nogil=True)
-def _clear_bit(words, address):
-    words[address >> 5] = np.uint32(np.int64(words[address >> 5]) & ~(1 << (address & 31)))
-
-
-@numba.njit(cache=True, nogil=True)
 def _is_removable(code, keep_ends):
     others = code & ~CENTRE
     if keep_ends and others & (others - 1) == 0:
         return False
     return is_simple(code)
+
+
+@numba.njit(cache=True, nogil=True)
+def strip(words, addresses, order, start, neighbour, held, keep_ends, row_words, plane_words):
+    """Remove simple voxels of a set of lines until none is left, each line from its end inwards.
+
+    Voxels are tried in the order given; where one goes its neighbours are tried next, so a spur of
+    any length goes at once. Held voxels stay, with `keep_ends` those with one neighbour too.
+    Returns which voxels are left; their bits alone stay set.
+    """
+    left = np.ones(len(addresses), dtype=np.bool_)
+    stack = np.empty(len(neighbour) + 1, dtype=np.int64)
+    for first in order:
+        stack[0] = first
+        height = 1
+        while height > 0:
+            height -= 1
+            i = stack[height]
+            if held[i] or not left[i]:
+                continue
+            code = neighbourhood(words, addresses[i], row_words, plane_words)
+            if not _is_removable(code, keep_ends):
+                continue
+            _clear_bit(words, addresses[i])
+            left[i] = False
+            for k in range(start[i], start[i + 1]):
+                if left[neighbour[k]]:
+                    stack[height] = neighbour[k]
+                    height += 1
+    return left
 
 
 @numba.njit(cache=True, nogil=True)
@@ -541,11 +587,10 @@ def run_out(inside, words, end_um, direction_um, radius_um, spacing_um, row_word
             last = address
             if step == 0:
                 continue
-            if words[address >> 5] >> (address & 31) & 1:
+            code = neighbourhood(words, address, row_words, plane_words)
+            if code & CENTRE or not is_simple(code):
                 break
-            if not is_simple(neighbourhood(words, address, row_words, plane_words)):
-                break
-            words[address >> 5] = np.uint32(np.int64(words[address >> 5]) | (1 << (address & 31)))
+            _set_bit(words, address)
             if count == len(added):
                 longer = np.empty(2 * count, dtype=np.int64)
                 for i in range(count):

@@ -7,7 +7,7 @@ from functools import partial
 import numpy as np
 
 from .._checks import checked_spacing_um, checked_volume
-from ._distance_kernels import square_along_planes, square_along_rows
+from ._distance_kernels import rows_of, square_along_planes, square_along_rows
 from .grid import in_threads
 
 __all__ = ["VesselVoxels", "distance_um", "vessel_voxels"]
@@ -99,9 +99,7 @@ def vessel_voxels(inside: np.ndarray, *, spacing_um: Sequence[float]) -> VesselV
     spacing = checked_spacing_um("spacing_um", spacing_um)
     nz, ny, nx = inside.shape
     linear = np.flatnonzero(inside)
-    row = linear // nx
-    column = (linear - row * nx).astype(np.int32)
-    row_start = np.searchsorted(row, np.arange(nz * ny + 1))
+    column, row_start = rows_of(linear, nz * ny, nx)
     squared = np.empty(len(linear), dtype=np.float32)
     square_along_rows(column, row_start, nx, spacing[2], squared)
     occupied = np.diff(row_start).reshape(nz, ny) > 0

@@ -18,6 +18,7 @@ from ._thin_kernels import (
     order_keys,
     run_out,
     set_bits,
+    strip,
 )
 from .distance import vessel_voxels
 from .mask import Mask, Skeleton
@@ -90,14 +91,15 @@ def thin(mask: Mask, *, settings: ThinSettings | None = None) -> Skeleton:
     keys = field.keys(field.linear, field.distance_um)
     first = field.eroded(words, keys, field.keys_of(caps), keep_ends=True)
     whole, field = field, field.restricted(first)
-    caps = _caps_across(field, first, caps)
-    core = field.lines_eroded(words, first, np.zeros(len(first), dtype=bool), keep_ends=False)
+    lines = field.lines(first)
+    caps = _caps_across(lines, caps)
+    core = field.stripped(words, lines, np.zeros(len(first), dtype=bool), keep_ends=False)
     set_bits(words, first)
-    ends = _ends(field, mask.inside, first, caps, core, settings.tip_protrusion)
-    lines = field.lines_eroded(words, first, ends, keep_ends=False)
-    lines = _run_out(whole, mask.inside, words, lines, caps)
+    ends = _ends(lines, mask, caps, core, settings.tip_protrusion)
+    left = field.stripped(words, lines, ends, keep_ends=False)
+    address = _run_out(whole, mask.inside, words, first[left], caps)
     return Skeleton(
-        field.grid.index(lines), whole.radius_um(lines), field.grid.shape, mask.spacing_um,
+        field.grid.index(address), whole.radius_um(address), field.grid.shape, mask.spacing_um,
         mask.origin_um,
     )  # fmt: skip
 
@@ -132,8 +134,9 @@ def without_corners(skeleton: Skeleton) -> Skeleton:
         linear[rising], skeleton.distance_um[rising], grid, skeleton.spacing_um, skeleton.origin_um
     )
     address = grid.address(field.linear)
-    words = grid.words(address)
-    address = field.lines_eroded(words, address, np.zeros(len(linear), dtype=bool), keep_ends=True)
+    nothing = np.zeros(len(address), dtype=bool)
+    left = field.stripped(grid.words(address), field.lines(address), nothing, keep_ends=True)
+    address = address[left]
     return Skeleton(
         grid.index(address), field.radius_um(address), grid.shape, skeleton.spacing_um,
         skeleton.origin_um,
@@ -167,11 +170,6 @@ class _Field:
         linear = self.grid.linear(self.grid.index(address))
         return self.distance_um[np.searchsorted(self.linear, linear)]
 
-    def position_um(self, address: np.ndarray) -> np.ndarray:
-        """Return positions on the grid, without its origin."""
-        positions: np.ndarray = self.grid.index(address) * np.array(self.spacing_um)
-        return positions
-
     def keys(self, linear: np.ndarray, distance_um: np.ndarray) -> np.ndarray:
         """Return a number for each voxel, no two alike: distance first, then the hash."""
         _, ny, nx = self.grid.shape
@@ -196,12 +194,41 @@ class _Field:
         kept = erode(words, address, levels_of_keys(keys), held, keep_ends, row_words, plane_words)
         return np.sort(address[:kept])
 
-    def lines_eroded(
-        self, words: np.ndarray, address: np.ndarray, held: np.ndarray, *, keep_ends: bool
+    def stripped(
+        self, words: np.ndarray, lines: "_Lines", held: np.ndarray, *, keep_ends: bool
     ) -> np.ndarray:
         """Remove simple voxels of a set of lines, all of them set, but those held."""
-        keys = self.keys_of(address)
-        return self.eroded(words, keys, keys[held], keep_ends=keep_ends)
+        left: np.ndarray = strip(
+            words, lines.address, np.argsort(self.keys_of(lines.address)), lines.start,
+            lines.neighbour, held, keep_ends, self.grid.row_words, self.grid.plane_words,
+        )  # fmt: skip
+        return left
+
+    def lines(self, address: np.ndarray) -> "_Lines":
+        """Return the voxels of these rising addresses as lines."""
+        start, neighbour = self.grid.neighbours(address)
+        position_um = self.grid.index(address) * np.array(self.spacing_um)
+        return _Lines(address, start, neighbour, position_um, self.radius_um(address))
+
+
+@dataclass(frozen=True, slots=True)
+class _Lines:
+    """Voxels of a thinned set by rising address, with what is known of each."""
+
+    address: np.ndarray
+    start: np.ndarray
+    neighbour: np.ndarray
+    position_um: np.ndarray
+    radius_um: np.ndarray
+
+    @property
+    def degree(self) -> np.ndarray:
+        """Number of neighbours of each voxel."""
+        return np.diff(self.start)
+
+    def where(self, address: np.ndarray) -> np.ndarray:
+        """Mark the voxels that have one of these addresses."""
+        return np.isin(self.address, address)
 
 
 def _cut_caps(field: _Field, inside: np.ndarray) -> np.ndarray:
@@ -233,16 +260,17 @@ def _cut_caps(field: _Field, inside: np.ndarray) -> np.ndarray:
     return address[order[first]][across]
 
 
-def _caps_across(field: _Field, lines: np.ndarray, caps: np.ndarray) -> np.ndarray:
+def _caps_across(lines: _Lines, caps: np.ndarray) -> np.ndarray:
     """Return the caps that end a line at nearly its full radius.
 
     A lumen's rounded side or tip that only touches the face narrows towards it instead.
     """
-    start, neighbour = field.grid.neighbours(lines)
-    place = np.searchsorted(lines, caps)
-    position_um, radius_um = field.position_um(lines), field.radius_um(lines)
-    end, _ = blunt_ends(place, start, neighbour, position_um, radius_um, _END_REACH)
-    return caps[end == place]
+    place = np.searchsorted(lines.address, caps)
+    end, _ = blunt_ends(
+        place, lines.start, lines.neighbour, lines.position_um, lines.radius_um, _END_REACH
+    )
+    across: np.ndarray = caps[end == place]
+    return across
 
 
 def _on_faces(inside: np.ndarray) -> np.ndarray:
@@ -257,67 +285,77 @@ def _on_faces(inside: np.ndarray) -> np.ndarray:
 
 
 def _ends(
-    field: _Field,
-    inside: np.ndarray,
-    lines: np.ndarray,
-    caps: np.ndarray,
-    core: np.ndarray,
-    protrusion: float,
+    lines: _Lines, mask: Mask, caps: np.ndarray, in_core: np.ndarray, protrusion: float
 ) -> np.ndarray:
-    """Return which voxels of the first lines are vessel ends.
+    """Return which voxels of the first lines are to be held: vessel ends, and places of blobs.
 
     Every line end hangs by a tree on the core: the loops, or one voxel in a component without
-    loops. Such a component is measured from the end that lies farthest from that voxel instead.
+    loops. Such a component is measured from the end that lies farthest from that voxel instead, and
+    if no end stands out its widest voxel is kept.
     """
-    start, neighbour = field.grid.neighbours(lines)
-    position_um, radius_um = field.position_um(lines), field.radius_um(lines)
-    is_cap, in_core = np.isin(lines, caps), np.isin(lines, core)
-    label, count = label_sets(start, neighbour, in_core)
+    is_cap = lines.where(caps)
+    label, count = label_sets(lines.start, lines.neighbour, in_core)
     alone = in_core & (np.bincount(label[in_core], minlength=count)[label] == 1)
-    distance_um, _, source = geodesic(start, neighbour, position_um, np.flatnonzero(in_core))
-    far = _farthest(distance_um, source, alone)
-    is_far = np.zeros(len(lines), dtype=bool)
-    is_far[far] = True
+    from_core_um, _, core_of = _geodesic(lines, in_core)
+    hanging = alone[core_of]
+    far = _greatest(from_core_um, core_of, hanging)
+    is_far = _marks(len(in_core), far)
     marked = (in_core & ~alone) | is_far
-    distance_um, before, source = geodesic(start, neighbour, position_um, np.flatnonzero(marked))
-    tips = np.flatnonzero(((np.diff(start) == 1) | is_cap) & ~marked)
+    distance_um, before, source = _geodesic(lines, marked)
+    tips = np.flatnonzero(((lines.degree == 1) | is_cap) & ~marked)
     tips = tips[np.lexsort((tips, -distance_um[tips], ~is_cap[tips]))]
     accepted = accept_tips(
-        tips, is_cap[tips], is_far, distance_um, before, start, neighbour, position_um, radius_um,
-        marked, inside, np.array(field.spacing_um), protrusion,
+        tips, is_cap[tips], is_far, distance_um, before, lines.start, lines.neighbour,
+        lines.position_um, lines.radius_um, marked, mask.inside, np.array(mask.spacing_um),
+        protrusion,
     )  # fmt: skip
-    held = np.zeros(len(lines), dtype=bool)
-    held[tips[accepted]] = True
-    held[np.intersect1d(far, source[tips[accepted]])] = True
-    return held
+    measured_from = np.intersect1d(far, source[tips[accepted]])
+    blobs = hanging & ~np.isin(source, measured_from)
+    widest = _greatest(lines.radius_um, core_of, blobs)
+    return _marks(len(in_core), tips[accepted], measured_from, widest)
 
 
-def _farthest(distance_um: np.ndarray, source: np.ndarray, alone: np.ndarray) -> np.ndarray:
-    """Return, for each source that stands alone, the voxel farthest from it."""
-    hanging = np.flatnonzero(alone[source])
-    order = hanging[np.lexsort((hanging, distance_um[hanging], source[hanging]))]
-    is_last = np.append(np.diff(source[order]) != 0, True)[: len(order)]
+def _geodesic(lines: _Lines, sources: np.ndarray) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
+    """Return the distance along the lines from marked voxels, the voxel before, and the source."""
+    distance_um, before, source = geodesic(
+        lines.start, lines.neighbour, lines.position_um, np.flatnonzero(sources)
+    )
+    return distance_um, before, source
+
+
+def _greatest(values: np.ndarray, group: np.ndarray, member: np.ndarray) -> np.ndarray:
+    """Return, for each group, the member with the greatest value (of equals the last)."""
+    members = np.flatnonzero(member)
+    order = members[np.lexsort((members, values[members], group[members]))]
+    is_last = np.append(np.diff(group[order]) != 0, True)[: len(order)]
     last: np.ndarray = order[is_last]
     return last
 
 
+def _marks(size: int, *places: np.ndarray) -> np.ndarray:
+    marks = np.zeros(size, dtype=bool)
+    marks[np.concatenate(places)] = True
+    return marks
+
+
 def _run_out(
-    field: _Field, inside: np.ndarray, words: np.ndarray, lines: np.ndarray, caps: np.ndarray
+    field: _Field, inside: np.ndarray, words: np.ndarray, address: np.ndarray, caps: np.ndarray
 ) -> np.ndarray:
     """Lead each free end straight along its vessel's axis to the last voxel inside the lumen."""
-    start, neighbour = field.grid.neighbours(lines)
-    position_um, radius_um = field.position_um(lines), field.radius_um(lines)
-    is_cap = np.isin(lines, caps)
-    tips = np.flatnonzero((np.diff(start) == 1) & ~is_cap)
-    end, inner = blunt_ends(tips, start, neighbour, position_um, radius_um, _END_REACH)
+    lines = field.lines(address)
+    is_cap = lines.where(caps)
+    tips = np.flatnonzero((lines.degree == 1) & ~is_cap)
+    position_um, radius_um = lines.position_um, lines.radius_um
+    end, inner = blunt_ends(tips, lines.start, lines.neighbour, position_um, radius_um, _END_REACH)
     end, inner = end[inner >= 0], inner[inner >= 0]
-    held = is_cap
-    held[end] = True
-    lines = field.lines_eroded(words, lines, held, keep_ends=False)
+    held = is_cap | _marks(len(address), end)
+    left = field.stripped(words, lines, held, keep_ends=False)
     grid = field.grid
     added = run_out(
         inside, words, position_um[end], position_um[end] - position_um[inner], radius_um[end],
         np.array(field.spacing_um), grid.row_words, grid.plane_words,
     )  # fmt: skip
-    lines = np.sort(np.concatenate((lines, added)))
-    return field.lines_eroded(words, lines, np.isin(lines, caps), keep_ends=True)
+    lines = field.lines(np.sort(np.concatenate((address[left], added))))
+    left = field.stripped(words, lines, lines.where(caps), keep_ends=True)
+    ended: np.ndarray = lines.address[left]
+    return ended
