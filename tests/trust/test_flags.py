@@ -34,7 +34,7 @@ def test_a_value_on_the_limit_passes_and_one_beyond_it_is_flagged(rule):
     mildest = rule.limits[0][1]
     assert raise_flags({rule.fact: mildest}) == []
     for severity, limit in rule.limits:
-        beyond = limit + sign * 1e-6 * abs(limit)
+        beyond = limit + sign * 1e-6 * max(abs(limit), 1.0)
         (flag,) = raise_flags({rule.fact: beyond})
         assert (flag.code, flag.severity, flag.limit, flag.value) == (
             rule.code, severity, limit, beyond,

@@ -1,177 +1,160 @@
 """`report.html`: one file that opens with no network, and the figures it shows."""
 
-import base64
+from base64 import b64encode
+from collections.abc import Mapping, Sequence
 from functools import cache
-from importlib.resources import files
 from typing import TYPE_CHECKING, Any
 
-from ..quantities import pa_to_mmhg
+from ..trust.flags import Flag
+from .content import ReportContent
 from .figures import figures
-from .scene import plotly_script, scene_json
+from .scene import plotly_script, scene_text
+from .views import outlines
+from .wording import (
+    CAUTION,
+    DEFINITIONS,
+    by_axis,
+    dominant_rows,
+    edit_rows,
+    figure_groups,
+    flag_rows,
+    headline,
+    resistance_rows,
+    rule_rows,
+    subtitle,
+    verdict,
+)
 
 if TYPE_CHECKING:
     from ..line import Results
 
-__all__ = ["CAUTION", "write_report"]
-
-CAUTION = (
-    "Research software: not a medical device, not for diagnosis or treatment decisions. Follow your"
-    " laboratory's and local rules for human and animal data, and have clinical questions answered by"
-    " licensed professionals."
-)
-
-_DEFINITIONS = {
-    "total length": "sum of the centrelines' arc lengths, from node to node",
-    "median radius": "median over segments of the mean lumen radius outside junction zones",
-    "orders": "diameter-defined Strahler orders (Kassab 1993)",
-    "branching ratio": "10 to the power of minus the slope of log10 number of elements on order",
-    "junction exponent": "x in: sum of daughters' radius^x = parent's radius^x, pooled and corrected for radius errors",
-    "plain exponent": "median over the junctions that have an exponent; biased by radius errors",
-    "cube residual": "(sum of daughters' radius^3 - parent's radius^3) / parent's radius^3, median",
-    "area ratio": "sum of daughters' radius^2 / parent's radius^2, median",
-    "hindrance": "(8 / pi) times the integral of ds / r^4, solved from the inlet to all outlets at one pressure; times viscosity it is the resistance",
-    "resistance": "pressure drop over flow, with the configured viscosity",
-    "effective segments": "1 / sum of squared resistance shares: how many segments decide the resistance",
-    "cost excess": "Murray's cost of the network over its least cost for the same flows, less one",
-    "trunk taper": "B in A = A0 exp(-B x / R0) along the trunk",
-}
+__all__ = ["CAUTION", "report_html", "write_report"]
 
 
 def write_report(
-    results: "Results", *, summary: dict[str, Any], flags: list[Any], twin: dict[str, Any] | None, title: str,
+    results: "Results",
+    *,
+    summary: Mapping[str, Any],
+    flags: Sequence[Flag],
+    twin: Mapping[str, Any] | None,
+    title: str,
     settings: str,
-) -> dict[str, bytes]:  # fmt: skip
-    """Return `report.html` and the figures as file contents.
+    provenance: Mapping[str, Any] | None = None,
+) -> dict[str, bytes]:
+    """Return `report.html` and the figures as file contents, by their names in the sample's folder.
 
     Parameters
     ----------
     results : Results
         What the line found.
-    summary : dict
+    summary : mapping
         As in summary.json.
-    flags : list of Flag
-        QC flags, most severe first.
-    twin : dict, optional
+    flags : sequence of Flag
+        QC flags, the most severe first.
+    twin : mapping, optional
         The twin's record.
+    title : str
+        Heading; empty: the sample's name.
     settings : str
         The configuration as TOML.
+    provenance : mapping, optional
+        Names and values that tell where the figures come from: input, checksum, versions.
+
+    Returns
+    -------
+    dict of str to bytes
+        The same results give the same bytes.
     """
-    pictures = figures(results, summary)
-    page = _template().render(
-        title=title or summary["sample"], caution=CAUTION, verdict=_verdict(flags), flags=flags,
-        figures={name.removesuffix(".png"): base64.b64encode(png).decode() for name, png in pictures.items()},
-        rows=_rows(summary), dominant=_dominant(results, summary), resistance=_resistance(results), twin=twin,
-        settings=settings, scene=scene_json(results), plotly=plotly_script(), summary=summary,
-        reasons=_absent(results, pictures), edits=_edits(results),
+    content = ReportContent(
+        title=title or str(summary.get("sample", "")), graph=results.graph, tables=results.tables,
+        summary=summary, flags=flags, projections=results.projections, profiles=results.profiles,
+        twin=twin, edits=results.edits, settings=settings, provenance=provenance or {},
     )  # fmt: skip
-    return {"report.html": page.encode()} | {f"figures/{name}": png for name, png in pictures.items()}
+    drawn, left_out = figures(content)
+    page = report_html(content, drawn, left_out)
+    return {"report.html": page.encode()} | {f"figures/{name}": png for name, png in drawn.items()}
+
+
+def report_html(
+    content: ReportContent, drawn: Mapping[str, bytes], left_out: Mapping[str, str]
+) -> str:
+    """Return the page.
+
+    Parameters
+    ----------
+    content : ReportContent
+        The sample's results.
+    drawn, left_out : mapping
+        As `figures` returns them.
+
+    Returns
+    -------
+    str
+        HTML that holds all it shows; names and words from the data are escaped.
+    """
+    groups = figure_groups(content)
+    page: str = _template().render(
+        title=content.title or "Vessel report",
+        caution=CAUTION,
+        subtitle=subtitle(content),
+        verdict=verdict(content.flags),
+        flags=list(flag_rows(content.flags)),
+        rules=list(rule_rows(content.summary.get("image") or {})),
+        headline=headline(groups),
+        groups=groups,
+        summary=content.summary,
+        figures={_stem(name): b64encode(png).decode() for name, png in drawn.items()},
+        reasons={_stem(name): reason for name, reason in left_out.items()},
+        has_image=bool(content.projections),
+        n_drawn=len(outlines(content.graph).segments),
+        n_segments=content.graph.n_segments,
+        twin=_twin(content.twin),
+        resistance=list(resistance_rows(content)),
+        dominant=list(dominant_rows(content)),
+        edits=edit_rows(content.edits),
+        definitions=DEFINITIONS,
+        settings=content.settings,
+        provenance=content.provenance,
+        scene=scene_text(content),
+        plotly=plotly_script(),
+    )
+    return page
 
 
 @cache
 def _template() -> Any:
-    from jinja2 import Environment  # noqa: PLC0415 - heavy to import
+    from jinja2 import Environment, PackageLoader, StrictUndefined  # noqa: PLC0415 - start-up time
 
-    text = (files("ramulus.report") / "templates" / "report.html.j2").read_text(encoding="utf-8")
-    environment = Environment(autoescape=True, trim_blocks=True, lstrip_blocks=True)
-    environment.filters["short"] = _short
-    return environment.from_string(text)
-
-
-def _verdict(flags: list[Any]) -> dict[str, str]:
-    severities = {f.severity for f in flags}
-    if "reject" in severities:
-        return {"class": "reject", "text": "Reject, unless the flags below can be answered"}
-    if "check" in severities:
-        return {"class": "check", "text": "Check the flags below before the sample enters the study"}
-    return {"class": "pass", "text": "No flag speaks against this sample"}
+    environment = Environment(
+        loader=PackageLoader("ramulus.report"), autoescape=True, undefined=StrictUndefined,
+        trim_blocks=True, lstrip_blocks=True,
+    )  # fmt: skip
+    return environment.get_template("report.html.j2")
 
 
-def _short(value: Any) -> str:
-    if value is None:
-        return "not defined"
-    if isinstance(value, float):
-        return f"{value:.4g}"
-    return str(value)
+def _stem(name: str) -> str:
+    return name.removesuffix(".png")
 
 
-def _estimate(entry: Any) -> tuple[str, str]:
-    """Text of a value with its interval, and the reason where it has none."""
-    if isinstance(entry, dict):
-        if entry.get("value") is None:
-            return "not defined", entry.get("reason", "")
-        text = f"{entry['value']:.4g}"
-        if entry.get("low") is not None and entry["low"] == entry["low"]:  # noqa: PLR0124 - NaN
-            text += f" ({entry['low']:.4g} to {entry['high']:.4g})"
-        return text, entry.get("reason", "")
-    return _short(entry), ""
-
-
-def _rows(summary: dict[str, Any]) -> list[dict[str, str]]:
-    flow = summary.get("inlet_flow_um3_per_s")
-    items = [
-        ("segments", summary["segments"], ""), ("junctions", summary["junctions"], ""),
-        ("free ends (at the border)", f"{summary['ends']} ({summary['border_ends']})", ""),
-        ("connected parts", summary["components"], ""), ("loops", summary["loops"], ""),
-        ("total length", summary["total_length_um"] / 1000, "mm"),
-        ("length density", summary.get("length_density_per_mm2"), "per mm2"),
-        ("vessel volume fraction", summary.get("vessel_volume_fraction"), ""),
-        ("median radius", summary["radius_median_um"], "um"),
-        ("smallest radius that can be sized", summary.get("smallest_resolved_radius_um"), "um"),
-        ("orders", summary["orders"], ""), ("branching ratio", summary["branching_ratio"], ""),
-        ("diameter ratio", summary["diameter_ratio"], ""), ("length ratio", summary["length_ratio"], ""),
-        ("segments per element", summary["segments_per_element"], ""),
-        ("ordered share of the length", summary["ordered_fraction"], ""),
-        ("junction exponent", summary["junction_exponent"], ""),
-        ("plain exponent", summary["junction_exponent_plain"], ""),
-        ("cube residual", summary["cube_residual_median"], ""),
-        ("area ratio", summary["area_ratio_median"], ""),
-        ("junctions used", summary["junctions_used"], ""),
-        ("junctions without an exponent", summary["junctions_unsolvable"], ""),
-        ("the same, expected from radius errors alone", summary["junctions_unsolvable_expected"], ""),
-        ("hindrance", summary["network_hindrance_per_um3"], "per um3"),
-        ("resistance", summary["network_resistance_pa_s_per_m3"], "Pa s/m3"),
-        ("inlet flow", flow, "um3/s"), ("effective segments", summary["effective_segments"], ""),
-        ("cost excess", summary["murray_cost_excess"], ""), ("trunk taper", summary["trunk_taper_b"], ""),
-    ]  # fmt: skip
-    rows = []
-    for name, entry, unit in items:
-        text, reason = _estimate(entry)
-        rows.append({"name": name, "text": text, "unit": unit, "reason": reason, "meaning": _DEFINITIONS.get(name, "")})
-    return rows
-
-
-def _dominant(results: "Results", summary: dict[str, Any]) -> list[dict[str, Any]]:
-    table = results.tables["segments"]
-    chosen = table.iloc[summary["dominant_segments"]] if summary["dominant_segments"] else table.iloc[:0]
-    out = []
-    for row in chosen.to_dict("records"):
-        a, b = (results.tables["nodes"].iloc[int(row[k])] for k in ("node_a", "node_b"))
-        out.append(row | {"place": [0.5 * (a[c] + b[c]) for c in ("z_um", "y_um", "x_um")]})
-    return out
-
-
-def _resistance(results: "Results") -> list[dict[str, Any]]:
-    rows = results.tables["resistance"].to_dict("records")
-    return [r | {"mmhg": pa_to_mmhg(r["resistance_pa_s_per_m3"]) * 1e-9} for r in rows]
-
-
-def _edits(results: "Results") -> list[tuple[str, int]]:
-    counts: dict[str, int] = {}
-    for edit in results.edits:
-        counts[edit["reason"].split(" of ")[0]] = counts.get(edit["reason"].split(" of ")[0], 0) + 1
-    return sorted(counts.items())
-
-
-def _absent(results: "Results", pictures: dict[str, bytes]) -> dict[str, str]:
-    """Why a figure is not there."""
-    why = {
-        "orders.png": "fewer than two orders: no ratio can be fitted",
-        "cube_law.png": "no junction with a parent and measured daughters",
-        "flow.png": "no flow: no path joins the inlet to an outlet",
-        "planes.png": "no image, or too few planes",
-        "projections.png": "no segment to draw", "radii.png": "no radius is known",
-    }  # fmt: skip
-    del results
-    return {name.removesuffix(".png"): reason for name, reason in why.items() if name not in pictures}
-
-
+def _twin(twin: Mapping[str, Any] | None) -> dict[str, str]:
+    """Return the twin's sentence, or why there is none."""
+    if twin is None:
+        return {"reason": "a twin is made for a stack of grey values alone"}
+    if twin.get("reason"):
+        return {"reason": str(twin["reason"])}
+    start = (
+        f"A synthetic stack of {by_axis(twin.get('shape') or [])} voxels, drawn"
+        f" {twin.get('draws')} times from this graph with the blur, contrast and noise of this"
+        " image and measured by the same settings"
+    )
+    parts = []
+    for key, text in (
+        ("radius_bias", "median error of the radii {:.1f} %"),
+        ("radius_spread", "90 % of the radii within {:.1f} %"),
+        ("length_ratio", "{:.0f} % of the true length"),
+        ("junction_recall", "{:.0f} % of the true junctions found"),
+        ("junction_precision", "{:.0f} % of the junctions found are true"),
+    ):
+        if twin.get(key) is not None:
+            parts.append(text.format(100 * twin[key]))
+    return {"sentence": f"{start}: {'; '.join(parts)}." if parts else f"{start}."}

@@ -108,9 +108,9 @@ FLAG_RULES: tuple[FlagRule, ...] = (
         f"{_PHANTOMS} (signal to noise from 4 up)", "image",
     ),
     FlagRule(
-        "attenuation", "attenuation_ratio", "below", (("check", 0.4),), "times",
-        "the dimmest planes have {value:.2g} of the brightest planes' vessel contrast; thin vessels"
-        " may be missing there",
+        "attenuation", "attenuation_ratio", "below", (("check", 0.4),), "share",
+        "the dimmest planes have {percent:.0f} % of the brightest planes' vessel contrast; thin"
+        " vessels may be missing there",
         _JUDGEMENT, "planes",
     ),
     FlagRule(
@@ -130,7 +130,7 @@ FLAG_RULES: tuple[FlagRule, ...] = (
         _JUDGEMENT, "radii",
     ),
     FlagRule(
-        "blur_assumed", "blur_assumed", "above", (("note", 0.5),), "yes or no",
+        "blur_assumed", "blur_assumed", "above", (("note", 0.0),), "yes or no",
         "too few wide vessels to estimate the blur; an assumed one is used, gauge.blur_sigma_um"
         " gives a measured one",
         _JUDGEMENT, "radii",
@@ -155,7 +155,7 @@ FLAG_RULES: tuple[FlagRule, ...] = (
         _JUDGEMENT, "edits",
     ),
     FlagRule(
-        "bridges", "bridged", "above", (("check", 0.5),), "count",
+        "bridges", "bridged", "above", (("check", 0.0),), "count",
         "gaps were bridged: {value:.0f}; look at each before its resistance is trusted",
         _JUDGEMENT, "edits",
     ),
@@ -172,12 +172,12 @@ FLAG_RULES: tuple[FlagRule, ...] = (
         "data contract", "orders",
     ),
     FlagRule(
-        "loops_in_tree", "loops_in_tree", "above", (("note", 0.5),), "count",
+        "loops_in_tree", "loops_in_tree", "above", (("note", 0.0),), "count",
         "loops in a tree-like network: {value:.0f}; in them the solved flow gives the direction",
         _JUDGEMENT, "orders",
     ),
     FlagRule(
-        "orders_not_converged", "orders_not_converged", "above", (("check", 0.5),), "yes or no",
+        "orders_not_converged", "orders_not_converged", "above", (("check", 0.0),), "yes or no",
         "the diameter-defined orders did not reach a fixed point",
         "Kassab et al. 1993, Am J Physiol 265:H350: orders are iterated until they stay", "orders",
     ),
