@@ -5,18 +5,31 @@ import numpy as np
 
 
 @numba.njit(cache=True, nogil=True)
-def smooth_lines(points, values, offsets, scale, slack, limit, step, capacity, out, out_values):
-    """Smooth and resample every segment; segment i's points start at capacity[i] in `out`.
+def smooth_lines(
+    points,
+    values,
+    offsets,
+    scale,
+    slack,
+    limit,
+    step,
+    capacity,
+    out,
+    out_values,
+    counts,
+    begin,
+    end,
+):
+    """Smooth and resample segments begin:end; segment i's points start at capacity[i] in `out`.
 
-    `scale` is the voxel's edge along each axis, `slack` the RMS residual allowed in voxels. Returns
-    how many points each segment got.
+    `scale` is the voxel's edge along each axis, `slack` the RMS residual allowed in voxels; `counts`
+    gets each segment's number of points.
     """
     finest = min(scale[0], scale[1], scale[2])
     strengths = np.empty(3)
     for axis in range(3):
         strengths[axis] = (scale[axis] / finest) ** 2
-    counts = np.empty(len(offsets) - 1, dtype=np.int64)
-    for i in range(len(counts)):
+    for i in range(begin, end):
         first, stop = offsets[i], offsets[i + 1]
         even, even_values = evenly_spaced(points[first:stop], values[first:stop], finest, 2)
         line = np.empty_like(even)
@@ -27,7 +40,6 @@ def smooth_lines(points, values, offsets, scale, slack, limit, step, capacity, o
             out_values[capacity[i] + k] = line_values[k]
             for axis in range(3):
                 out[capacity[i] + k, axis] = line[k, axis]
-    return counts
 
 
 @numba.njit(cache=True, nogil=True)

@@ -1,11 +1,13 @@
 """Smooth centrelines without the staircase of voxels, and nodes where the axes meet."""
 
 from collections.abc import Sequence
+from functools import partial
 
 import numpy as np
 
 from .._checks import checked_spacing_um
 from .._settings import Settings, setting
+from ..image.grid import in_threads
 from ._centreline_kernels import smooth_lines
 from .graph import CentrelineGraph
 from .zones import zone_bounds_um
@@ -178,10 +180,13 @@ def _laid(
     most = np.ceil(graph.segment_length_um() / step_um).astype(np.int64) + 3
     capacity = np.concatenate(([0], np.cumsum(most)))
     points_um, radius_um = np.empty((capacity[-1], 3)), np.empty(capacity[-1])
-    counts = smooth_lines(
-        graph.point_position_um.copy(), graph.point_radius_map_um.copy(), graph.point_offsets,
-        scale, settings.slack_voxels, _STRONGEST, step_um, capacity, points_um, radius_um,
+    counts = np.empty(graph.n_segments, dtype=np.int64)
+    part = partial(
+        smooth_lines, graph.point_position_um.copy(), graph.point_radius_map_um.copy(),
+        graph.point_offsets, scale, settings.slack_voxels, _STRONGEST, step_um, capacity,
+        points_um, radius_um, counts,
     )  # fmt: skip
+    in_threads(part, graph.n_segments)
     offsets = np.concatenate(([0], np.cumsum(counts)))
     kept = np.arange(offsets[-1]) + np.repeat(capacity[:-1] - offsets[:-1], counts)
     return with_lines(graph, points_um[kept], offsets, radius_um[kept])
