@@ -98,7 +98,7 @@ def test_a_fixed_point_reproduces_itself(parent, data):
         assert again.order.tolist() == found.order.tolist()
         assert again.iterations == 1
     else:
-        assert "repeats every" in found.note or "still change" in found.note
+        assert "does not settle" in found.note or "in the last turn" in found.note
 
 
 @settings(deadline=None)
@@ -191,16 +191,20 @@ def test_the_start_is_strahler_unless_another_is_given():
     assert by_hand.converged
 
 
-def test_an_iteration_that_repeats_ends_with_the_least_spread_and_says_so():
-    for seed in range(1000):
-        random = np.random.default_rng(seed)
-        parent = np.array([-1, *(random.integers(0, k) for k in range(1, 40))])
-        found = diameter_orders(parent, random.lognormal(2, 0.7, 40))
-        if "repeats" in found.note:
-            break
-    spread = [np.sum((step.count - 1) * step.sd_um**2) for step in found.steps]
-    period = int(found.note.split("every ")[1].split()[0])
-    assert spread[-1] == pytest.approx(min(spread[-1 - period :]))
+def test_a_tree_that_does_not_settle_keeps_the_second_turn_and_says_so():
+    # Diameters without gaps: the cuts run away towards the thin vessels, and the share that changes
+    # rises again.
+    random = np.random.default_rng(3)
+    parent = np.array([-1, *(random.integers(k // 3, k) for k in range(1, 400))])
+    diameter = random.lognormal(2, 0.4, 400)
+    found = diameter_orders(parent, diameter)
+    assert not found.converged
+    assert found.note.startswith("the iteration does not settle: never less than")
+    assert "those after turn 2 are kept" in found.note
+    twice = diameter_orders(parent, diameter, settings=OrderSettings(max_iterations=2))
+    assert found.order.tolist() == twice.order.tolist()
+    np.testing.assert_array_equal(found.cuts_um, twice.cuts_um)
+    assert len(found.steps) == 3
 
 
 def test_too_few_turns_are_told():
@@ -208,8 +212,29 @@ def test_too_few_turns_are_told():
     found = diameter_orders(
         frame["parent"], frame["diameter_um"], settings=OrderSettings(max_iterations=1)
     )
-    assert found.note == "segments still change their order after 1 turns"
+    assert found.note == (
+        "the iteration does not settle: never less than 15 % of the segments change their order;"
+        " those after turn 1 are kept"
+    )
     assert not found.converged
+
+
+def test_same_order_side_branches_add_an_order_to_start_from():
+    # A trunk of order 2 with a side branch of order 2: Strahler's rule takes that for a fork.
+    #
+    #   10   9       9   10
+    #     \ /         \ /
+    #     20    10    21
+    #       \  /     /
+    #        22     /
+    #          \  /
+    #           23
+    parent, diameter = [-1, 0, 0, 1, 1, 2, 2, 3, 3], [23, 22, 21, 20, 10, 9, 10, 10, 9]
+    found = diameter_orders(parent, diameter)
+    assert found.steps[0].count.tolist() == [5, 3, 1]
+    own = diameter_orders(parent, diameter, start=[2, 2, 2, 2, 1, 1, 1, 1, 1])
+    assert own.order.tolist() == [2, 2, 2, 2, 1, 1, 1, 1, 1]
+    assert own.converged
 
 
 def test_losing_the_thinnest_tips_shifts_orders_by_less_than_their_number():

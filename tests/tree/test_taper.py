@@ -74,8 +74,8 @@ def test_a_vessel_hardly_longer_than_wide_has_no_interval():
     assert np.isnan(found.high)
 
 
-#   A trunk of three segments with a side branch at each joint; the first side branch is wider than the
-#   trunk there, but a stub.
+#   A trunk of three segments with a side branch at each joint; the first side branch is wider than
+#   the trunk there, but a stub.
 #
 #             4      3 5
 #            /        |/

@@ -8,10 +8,15 @@ from the tips to the root, each segment takes the order of its diameter between 
 less than a daughter's; tips and cut ends have no daughters and go by diameter alone. D_n, S_n and
 the cuts are found again, and so on.
 
-- End: no segment changes its order; then D_n and S_n, too, change by less than the 1 % of the
-  sources. Where the iteration only comes back to earlier orders, or has not settled after
-  `max_iterations`, the iterate of least spread within orders (or the last) is kept, `note` says so,
-  and `converged` tells whether the last change of every D_n and S_n was below 1 % of D_n.
+- End: no segment changes its order, or less than 1 % of them do and the share falls no more; either
+  is what the sources call a change below 1 %, and `converged` is true.
+- A tree that does not settle: the share that changes rises again from above 1 %, or is still above
+  it after `max_iterations`. Where diameters leave no gaps between orders the cuts then run away
+  towards the thin vessels. The orders after the second turn are kept, as far as the sources went
+  ("one or two", "two or three" cycles), `converged` is false and `note` says so.
+- Start: Strahler's orders, all tips 1. They fix how many orders there can be, and each side branch
+  of its parent's own order counts as a fork there; a start of one's own, or frozen cuts, avoid
+  that.
 - Missing orders: an order that empties is dropped, and the orders above it move down. Under frozen
   cuts nothing moves: an order without vessels stays empty.
 - Crossing means: where a cut would not lie between the two means, it is their midpoint; where the
@@ -20,7 +25,6 @@ the cuts are found again, and so on.
 - A single member has no spread: S_n = 0.
 """
 
-import hashlib
 from dataclasses import dataclass, field
 from typing import Literal
 
@@ -36,6 +40,7 @@ from .strahler import checked_parent, topological_orders, walking_order
 __all__ = ["DiameterOrders", "OrderSettings", "OrderStep", "TipLoss", "diameter_orders", "tip_loss"]
 
 _SETTLED = 0.01  # Kassab 1993, Jiang 1994: change below 1 %
+_KEPT = 2  # turns kept of an iteration that does not settle
 
 
 class OrderSettings(Settings):
@@ -92,7 +97,7 @@ class DiameterOrders:
     note : str
         What there is to say about it; empty where no segment changes its order any more.
     steps : tuple of OrderStep
-        The start and every turn.
+        The start and every turn up to the orders that are kept.
     """
 
     order: np.ndarray
@@ -261,39 +266,36 @@ def _frozen(
 def _iterate(
     parent: np.ndarray, walk: np.ndarray, diameter: np.ndarray, order: np.ndarray, limit: int
 ) -> DiameterOrders:
-    """Turn until no segment changes its order; each turn depends on the orders before it alone."""
-    steps = [_step(order, diameter)]
-    turn_of = {_digest(order): 0}
-    converged, note, turn = False, "", 0
+    """Turn until no segment changes its order, or until the share that does falls no more."""
+    steps, early, least, turn = [_step(order, diameter)], order, 1.0, 0
     for turn in range(1, limit + 1):
-        new = _turn(parent, walk, diameter, steps[-1].cuts_um)
-        if np.array_equal(new, order):
-            converged = True
+        new = np.empty(len(parent), np.int64)
+        kernels.diameter_walk(parent, walk, diameter, steps[-1].cuts_um, new)
+        share = float(np.mean(new != order)) if len(new) else 0.0
+        if share == 0:
+            return _record(order, steps, turn, note="", converged=True)
+        if share > least:
             break
-        order = new
+        order, least = _without_gaps(new), share
         steps.append(_step(order, diameter))
-        seen = turn_of.setdefault(_digest(order), turn)
-        if seen < turn:
-            converged = _settled(steps[-2], steps[-1])
-            order = _least_spread(parent, walk, diameter, order, turn - seen)
-            steps.append(_step(order, diameter))
-            note = f"the iteration repeats every {turn - seen} turns: its orders of least spread"
-            break
-    else:
-        converged = _settled(steps[-2], steps[-1])
-        note = f"segments still change their order after {limit} turns"
+        early = order if turn <= _KEPT else early
+    if least < _SETTLED:
+        note = f"{100 * least:.2g} % of the segments changed their order in the last turn"
+        return _record(order, steps, turn, note=note, converged=True)
+    note = (
+        f"the iteration does not settle: never less than {100 * least:.2g} % of the segments change"
+        f" their order; those after turn {min(turn, _KEPT)} are kept"
+    )
+    return _record(early, steps[: _KEPT + 1], turn, note=note, converged=False)
+
+
+def _record(
+    order: np.ndarray, steps: list[OrderStep], turn: int, *, note: str, converged: bool
+) -> DiameterOrders:
     last = steps[-1]
     return DiameterOrders(
         order, last.cuts_um, last.mean_um, last.sd_um, turn, converged, note, tuple(steps)
     )
-
-
-def _turn(
-    parent: np.ndarray, walk: np.ndarray, diameter: np.ndarray, cuts: np.ndarray
-) -> np.ndarray:
-    order = np.empty(len(parent), np.int64)
-    kernels.diameter_walk(parent, walk, diameter, cuts, order)
-    return _without_gaps(order)
 
 
 def _step(order: np.ndarray, diameter: np.ndarray) -> OrderStep:
@@ -326,33 +328,6 @@ def _without_gaps(order: np.ndarray) -> np.ndarray:
     """Give the orders that occur the numbers 1, 2, 3 ... without gaps."""
     occurs = np.bincount(order) > 0
     return np.asarray(np.cumsum(occurs)[order], dtype=np.int64)
-
-
-def _settled(before: OrderStep, after: OrderStep) -> bool:
-    if len(before.mean_um) != len(after.mean_um):
-        return False
-    limit = _SETTLED * before.mean_um
-    return bool(
-        (np.abs(after.mean_um - before.mean_um) < limit).all()
-        and (np.abs(after.sd_um - before.sd_um) < limit).all()
-    )
-
-
-def _digest(order: np.ndarray) -> bytes:
-    return hashlib.blake2b(order.astype(np.int16).tobytes(), digest_size=16).digest()
-
-
-def _least_spread(
-    parent: np.ndarray, walk: np.ndarray, diameter: np.ndarray, order: np.ndarray, period: int
-) -> np.ndarray:
-    best, least = order, np.inf
-    for _ in range(period):
-        order = _turn(parent, walk, diameter, _step(order, diameter).cuts_um)
-        _, mean, _ = _moments(order, diameter, int(order.max()))
-        spread = float(np.sum((diameter - mean[order - 1]) ** 2))
-        if spread < least:
-            best, least = order, spread
-    return best
 
 
 def _settle_elements(
