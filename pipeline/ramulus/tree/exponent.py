@@ -11,6 +11,7 @@ from numpy.typing import ArrayLike
 __all__ = ["exponent_intervals", "junction_exponent", "junction_exponents", "log_ratio"]
 
 _TURNS = 60  # halvings of a bracket: past the last digit
+_BOUND_TURNS = 40  # the same for a bound of an interval: ten digits
 _LARGE = 2000.0  # an exponent that stands for no bound
 
 
@@ -157,7 +158,7 @@ def exponent_intervals(
     for wanted in (z, -z):
         low = np.full(len(parent_um), np.log(1e-3))
         high = np.full(len(parent_um), np.log(_LARGE))
-        for _ in range(_TURNS):
+        for _ in range(_BOUND_TURNS):
             middle = 0.5 * (low + high)
             above = deviate(np.exp(middle)) > wanted
             low, high = np.where(above, middle, low), np.where(above, high, middle)
