@@ -22,7 +22,7 @@ def smooth_lines(
 ):
     """Smooth and resample segments begin:end; segment i's points start at capacity[i] in `out`.
 
-    `scale` is the voxel's edge along each axis, `slack` the RMS residual allowed in voxels; `counts`
+    `scale` is the voxel edge along each axis, `slack` the RMS residual allowed in voxels; `counts`
     gets each segment's number of points.
     """
     finest = min(scale[0], scale[1], scale[2])
