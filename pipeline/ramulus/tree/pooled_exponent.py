@@ -270,7 +270,7 @@ def _statistic(g: float, data: _Data, tau2: float) -> float:
     psi = _clipped(g, data, tau2)
     # Never less than the errors say: few junctions may agree by luck, exact radii up to rounding.
     spread = max(float(np.std(psi, ddof=1)), _CLIPPED_SQUARE**0.5)
-    return float(np.mean(psi)) / spread * float(np.sqrt(len(psi)))
+    return float(np.mean(psi) / spread * np.sqrt(len(psi)))
 
 
 def _crossing(data: _Data, tau2: float, wanted: float) -> float:
