@@ -37,8 +37,8 @@ class Skeleton:
     voxels : (n, 3) int64 array
         Indices z, y, x of the skeleton's voxels on the mask's grid, in raster order.
     distance_um : (n,) float32 array
-        Distance of each to the nearest background voxel's centre less half a voxel's edge
-        convention as stated in `image.distance`.
+        Distance of each to the nearest background voxel, centre to centre as `image.distance`
+        defines it.
     shape, spacing_um, origin_um :
         The mask's grid.
     """

@@ -8,18 +8,15 @@ from .._settings import Settings, setting
 from ..errors import UnusableInputError
 from ._bit_grid import BitGrid
 from ._thin_kernels import (
-    accept_tips,
     addresses_of_keys,
-    blunt_ends,
     erode,
-    geodesic,
     label_sets,
     levels_of_keys,
     order_keys,
-    run_out,
     set_bits,
     strip,
 )
+from ._tip_kernels import accept_tips, blunt_ends, geodesic, run_out
 from .distance import vessel_voxels
 from .mask import Mask, Skeleton
 

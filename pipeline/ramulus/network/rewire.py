@@ -21,8 +21,15 @@ def join_series(graph: CentrelineGraph, keep: np.ndarray | None = None) -> Centr
 
     Parameters
     ----------
+    graph : CentrelineGraph
+        The graph.
     keep : (n,) bool array, optional
         Nodes that stay whatever their degree.
+
+    Returns
+    -------
+    CentrelineGraph
+        A closed ring keeps one node.
     """
     degree = graph.node_degree().copy()
     if keep is not None:
@@ -72,12 +79,19 @@ def merge_nodes(
 
     Parameters
     ----------
+    graph : CentrelineGraph
+        The graph.
     group : (n,) int array
         Group number of each node, 0 to the number of groups less one.
     weight : (n,) array
         Weight of each node's position.
     drop : (m,) bool array
         Segments that vanish.
+
+    Returns
+    -------
+    CentrelineGraph
+        Nodes in the order of their groups.
     """
     n = int(group.max()) + 1 if len(group) else 0
     total = np.bincount(group, weights=weight, minlength=n)
@@ -143,9 +157,23 @@ def part_node(
 
 
 def add_segments(graph: CentrelineGraph, pairs: np.ndarray, review: str) -> CentrelineGraph:
-    """Return the graph with straight segments added between pairs of nodes, (k, 2) node ids.
+    """Return the graph with straight segments added between pairs of nodes.
 
     The map's radius runs linearly from the radius at one node to that at the other.
+
+    Parameters
+    ----------
+    graph : CentrelineGraph
+        The graph.
+    pairs : (k, 2) int array
+        The nodes to join.
+    review : str
+        Why a person should look at the new segments.
+
+    Returns
+    -------
+    CentrelineGraph
+        With the new segments last.
     """
     if not len(pairs):
         return graph
