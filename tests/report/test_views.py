@@ -52,9 +52,10 @@ def test_voxels_lie_at_index_times_spacing():
     content = made_content()
     figure = image_views(content, with_graph=False)
     spacing = content.graph.spacing_um
-    for axes, across, down in zip(figure.axes, (2, 2, 0), (1, 0, 1), strict=True):
+    seen = [content.projections["z"], content.projections["y"], content.projections["x"].T]
+    for image, axes, across, down in zip(seen, figure.axes, (2, 2, 0), (1, 0, 1), strict=True):
         left, right, bottom, top = axes.images[0].get_extent()
-        rows, columns = axes.images[0].get_array().shape
+        rows, columns = image.shape
         assert (left, top) == (-spacing[across] / 2, -spacing[down] / 2)
         assert (right - left) / columns == pytest.approx(spacing[across])
         assert (bottom - top) / rows == pytest.approx(spacing[down])

@@ -42,6 +42,7 @@ _SHOWN = (
 _MOST_SEGMENTS = 12_000
 _MOST_POINTS = 30_000
 _LARGEST_SIDE = 420
+_STEPS = 65535  # of a position, in 16 bits
 
 
 def scene(content: ReportContent) -> dict[str, Any]:
@@ -64,11 +65,12 @@ def scene(content: ReportContent) -> dict[str, Any]:
     table = _segment_values(content).iloc[segments]
     radius = graph.point_radius_um[index]
     mean = np.repeat(graph.segment_radius_um()[segments], counts)
+    position = _positions(graph.point_position_um[index])
     return {
         "note": _note(graph.n_segments, len(segments), every),
         "segment": _array(segments, "<i4"),
         "count": _array(counts, "<i4"),
-        "position": _positions(graph.point_position_um[index]),
+        "position": position,
         "radius": _array(np.where(np.isfinite(radius), radius, mean), "<f4"),
         "colours": [_colour(table, *quantity) for quantity in QUANTITIES],
         "shown": [
@@ -79,7 +81,7 @@ def scene(content: ReportContent) -> dict[str, Any]:
         "review": {str(k): text for k, text in _reviews(table, segments)},
         "images": {view: _image(image) for view, image in sorted(content.projections.items())},
         "spacing_um": list(graph.spacing_um),
-        "unit": length_unit(float(np.ptp(graph.node_position_um, axis=0).max(initial=0.0))),
+        "unit": length_unit(_STEPS * position["step"]),
     }
 
 
@@ -92,7 +94,7 @@ def packed(text: str) -> str:
     >>> zlib.decompress(b64decode(packed("aaaa"))).decode()
     'aaaa'
     """
-    return b64encode(zlib.compress(text.encode(), 9)).decode()
+    return b64encode(zlib.compress(text.encode(), 6)).decode()
 
 
 @cache
@@ -155,7 +157,7 @@ def _positions(position_um: np.ndarray) -> dict[str, Any]:
     """Return x, y, z in 16 bits of their common range: a step is a 65,000th of the volume."""
     xyz = position_um[:, ::-1]
     low = xyz.min(axis=0) if len(xyz) else np.zeros(3)
-    step = float(max((xyz - low).max() if len(xyz) else 0.0, 1e-9)) / 65535
+    step = float(max((xyz - low).max() if len(xyz) else 0.0, 1e-9)) / _STEPS
     return {"low": low.tolist(), "step": step, "data": _array(np.rint((xyz - low) / step), "<u2")}
 
 
