@@ -110,10 +110,11 @@ def publish(out: Path, staging: Path, record: Mapping[str, object]) -> None:
         _step_aside(out)
         for name in [*names, "run.json"]:
             _move(staging / name, out / name)
-        _sync(out)
     except BaseException:
         _bring_back(out)
         raise
+    with suppress(OSError):  # all is there; only a power cut just now could undo the moves
+        _sync(out)
     shutil.rmtree(out / _BEFORE, ignore_errors=True)
 
 

@@ -281,7 +281,8 @@ def _nearest(where: list[str]) -> str:
         return f"; did you mean {' or '.join(map(repr, elsewhere[:3]))}?"
     section = _section(where[:-1])
     known = [".".join([*where[:-1], name]) for name in section.model_fields] if section else []
-    return _hint(".".join(where), known) or _hint(".".join(where), every) or _listed(known)
+    word = ".".join(where)
+    return _hint(word, known) or _hint(word, every, alike=0.8) or _listed(known)
 
 
 def _section(where: Sequence[str]) -> type[BaseModel] | None:
@@ -299,9 +300,11 @@ def _keys(model: type[BaseModel], before: str) -> Iterator[str]:
             yield from _keys(field.annotation, f"{before}{name}.")
 
 
-def _hint(word: str, known: Sequence[str]) -> str:
-    close = get_close_matches(word, known, n=1, cutoff=0.6)
-    return f"; did you mean {close[0]!r}?" if close else ""
+def _hint(word: str, known: Sequence[str], *, alike: float = 0.6) -> str:
+    # Of a dotted name only the last part is compared: all keys of a section begin alike.
+    last = {name.rpartition(".")[2]: name for name in known}
+    close = get_close_matches(word.rpartition(".")[2], last, n=1, cutoff=alike)
+    return f"; did you mean {last[close[0]]!r}?" if close else ""
 
 
 def _listed(known: Sequence[str]) -> str:
