@@ -198,7 +198,17 @@ def test_the_samples_folder_gets_the_page_and_its_figures(content):
 
 @pytest.mark.slow
 def test_a_hundred_thousand_segments_stay_below_the_size_and_are_said_to_be_thinned():
-    graph = random_tree(100_000, seed=2)
-    html = page_of(bare_graph(made_content(), graph))
+    rng = np.random.default_rng(2)
+    graph = random_tree(100_000, seed=2).replace(spacing_um=(1.0, 1.0, 1.0))
+    names = [
+        "voxels_across", "tortuosity", "order", "strahler", "generation", "radius_um_low",
+        "flow_um3_per_s", "velocity_um_per_s", "wall_shear_stress_pa", "resistance_share",
+        "radius_um_high",
+    ]  # fmt: skip
+    segments = graph.to_frames()["segments"].assign(**{n: rng.random(100_000) for n in names})
+    # Noise is what packs worst.
+    projections = {name: rng.random((900, 900)) for name in "zyx"}
+    content = bare_graph(made_content(), graph)
+    html = page_of(changed(content, tables={"segments": segments}, projections=projections))
     assert len(html) < 6e6
     assert "Drawn are 12,000 of 100,000 segments" in html

@@ -126,7 +126,7 @@ def test_a_hundred_thousand_segments_open_in_five_seconds(tmp_path):
         # the view in space, drawn without a graphics processor here, may follow.
         load_ms = browser.run("performance.getEntriesByType('navigation')[0].loadEventEnd")
         assert load_ms < 5000
-        assert "Shown are 12,000 of 100,000" in browser.run(
+        assert "Shown are 8,000 of 100,000" in browser.run(
             "document.getElementById('note').textContent"
         )
         assert clean(browser), (browser.problems, browser.requests)

@@ -11,27 +11,40 @@ import numpy as np
 if TYPE_CHECKING:
     from matplotlib.axes import Axes
     from matplotlib.figure import Figure
+    from matplotlib.lines import Line2D
+    from PIL.Image import Image
 
 __all__ = [
-    "BLUE", "GREEN", "INK", "ORANGE", "RULE", "SOFT", "blank", "chart", "length_unit", "log_ticks",
-    "own_settings", "png_bytes", "readable",
+    "BLUE", "GREEN", "INK", "ORANGE", "RULE", "SOFT", "blank", "chart", "key", "length_unit",
+    "log_ticks", "own_settings", "png_bytes", "readable",
 ]  # fmt: skip
 
 # Okabe & Ito 2008, Color Universal Design: told apart with every common colour vision.
 BLUE, ORANGE, GREEN = "#0072B2", "#D55E00", "#009E73"
 INK, SOFT, RULE = "#1d2326", "#525c62", "#d5dadd"
+_LOOK: dict[str, Any] = {
+    "axes.axisbelow": True, "axes.edgecolor": SOFT, "axes.grid": True, "axes.labelcolor": INK,
+    "axes.labelsize": 9, "axes.spines.right": False, "axes.spines.top": False,
+    "axes.titlecolor": INK, "axes.titlesize": 9.5, "grid.color": "#e9ecee", "grid.linewidth": 0.7,
+    "text.color": INK, "xtick.color": SOFT, "xtick.labelcolor": INK, "xtick.labelsize": 8.5,
+    "ytick.color": SOFT, "ytick.labelcolor": INK, "ytick.labelsize": 8.5,
+}  # fmt: skip
 _DPI = 120
+_MOST_BYTES = 900_000
 _MINUS = "\N{MINUS SIGN}"
 _SUPERSCRIPT = str.maketrans("-0123456789", "⁻⁰¹²³⁴⁵⁶⁷⁸⁹")
 
 
 @contextmanager
 def own_settings() -> Iterator[None]:
-    """Draw with matplotlib's own defaults, whatever the user's configuration file says."""
+    """Draw in the report's own look, whatever the user's configuration file says.
+
+    Axes that are made within it need no styling of their own, which would make all ticks anew.
+    """
     from matplotlib import rc_context, rcParamsDefault  # noqa: PLC0415 - heavy to import
 
-    kept = {k: v for k, v in rcParamsDefault.items() if not k.startswith("backend")}
-    with rc_context(kept):
+    kept: Any = {k: v for k, v in rcParamsDefault.items() if not k.startswith("backend")}
+    with rc_context(kept | _LOOK):
         yield
 
 
@@ -48,25 +61,50 @@ def blank(width_in: float, height_in: float) -> "Figure":
 def chart(title: str, *, x: str, y: str, log: str = "") -> tuple["Figure", "Axes"]:
     """Return a figure with one pair of axes; `log` names those that are logarithmic."""
     figure = blank(4.9, 3.3)
-    axes = figure.add_axes((0.17, 0.16, 0.8, 0.73))
+    axes = figure.add_axes((0.17, 0.16, 0.8, 0.7))
     # Fixed places spare matplotlib the search for some that clear everything else.
-    axes.set_title(title, fontsize=9.5, loc="left", color=INK, y=1.02)
-    axes.set_xlabel(x, fontsize=9, color=INK)
-    axes.xaxis.set_label_coords(0.5, -0.115)
-    axes.set_ylabel(y, fontsize=9, color=INK)
+    axes.set_title(title, loc="left", y=1.09)
+    axes.set_xlabel(x)
+    axes.xaxis.set_label_coords(0.5, -0.12)
+    axes.set_ylabel(y)
     axes.yaxis.set_label_coords(-0.15, 0.5)
-    for side in ("top", "right"):
-        axes.spines[side].set_visible(False)
-    for side in ("left", "bottom"):
-        axes.spines[side].set_color(SOFT)
-    axes.tick_params(which="both", colors=SOFT, labelcolor=INK, labelsize=8.5)
-    axes.set_axisbelow(True)
-    axes.grid(visible=True, color="#e9ecee", linewidth=0.7)
     if "x" in log:
         axes.set_xscale("log")
     if "y" in log:
         axes.set_yscale("log")
     return figure, axes
+
+
+def key(axes: "Axes") -> None:
+    """Write what was labelled in one row above the axes, where it covers no data."""
+    renderer = axes.figure.canvas.get_renderer()  # type: ignore[attr-defined]
+    place, width = 0.0, axes.get_window_extent().width
+    for handle, label in zip(*axes.get_legend_handles_labels(), strict=True):
+        sign, colour = _sign(handle)
+        text = axes.text(
+            place, 1.03, f"{sign} {label}", transform=axes.transAxes, color=colour, fontsize=8
+        )
+        place += text.get_window_extent(renderer).width / width + 0.035
+
+
+def _sign(handle: Any) -> tuple[str, Any]:
+    """Return a sign and a colour that stand for what was drawn."""
+    from matplotlib.collections import LineCollection  # noqa: PLC0415 - heavy to import
+    from matplotlib.lines import Line2D  # noqa: PLC0415
+
+    drawn = handle[0] if isinstance(handle, tuple) else handle  # the first of bars, or a bar's dot
+    if isinstance(drawn, Line2D):
+        return _sign_of_line(drawn), drawn.get_color()
+    fill = drawn.get_color() if isinstance(drawn, LineCollection) else drawn.get_facecolor()
+    return "\N{BLACK RECTANGLE}", np.ravel(fill)[:3].tolist()
+
+
+def _sign_of_line(line: "Line2D") -> str:
+    if line.get_marker() == "o":
+        return "\N{WHITE CIRCLE}" if line.get_markerfacecolor() == "none" else "\N{BLACK CIRCLE}"
+    if line.get_marker() == "s":
+        return "\N{BLACK SQUARE}"
+    return "\N{EN DASH}\N{EN DASH}" if line.is_dashed() else "\N{EM DASH}"
 
 
 def length_unit(span_um: float) -> tuple[str, float]:
@@ -133,18 +171,30 @@ def readable(value: Any, digits: int = 3, *, zeros: bool = False) -> str:
 def png_bytes(figure: "Figure", *, colours: Literal["few", "grey", "all"]) -> bytes:
     """Return the figure as PNG without date or version: the same bytes each time.
 
-    A chart needs few colours (256 that are chosen from it) and then takes a third of the bytes.
+    A chart needs few colours (256 that are chosen from it) and then takes a third of the bytes; so
+    do pictures that would be too large for the page in all colours.
     """
     from PIL import Image  # noqa: PLC0415 - comes with matplotlib
 
     figure.canvas.draw()
-    pixels = Image.fromarray(np.asarray(figure.canvas.buffer_rgba())[..., :3].copy())  # type: ignore[attr-defined]
+    buffer = np.asarray(figure.canvas.buffer_rgba())  # type: ignore[attr-defined]
+    pixels = Image.fromarray(buffer[..., :3].copy())
     if colours == "few":
-        pixels = pixels.quantize(256, method=Image.Quantize.FASTOCTREE, dither=Image.Dither.NONE)
-        # The mean colour of the octree's lightest cell is not quite the page's white.
-        pixels.putpalette([255 if level > 250 else level for level in pixels.getpalette() or []])
-    if colours == "grey":
-        pixels = pixels.convert("L")
+        return _saved(_with_few_colours(pixels))
+    png = _saved(pixels.convert("L") if colours == "grey" else pixels)
+    return png if len(png) <= _MOST_BYTES else _saved(_with_few_colours(pixels))
+
+
+def _with_few_colours(pixels: "Image") -> "Image":
+    from PIL.Image import Dither, Quantize  # noqa: PLC0415 - comes with matplotlib
+
+    few = pixels.quantize(256, method=Quantize.FASTOCTREE, dither=Dither.NONE)
+    # The mean colour of the octree's lightest cell is not quite the page's white.
+    few.putpalette([255 if level > 250 else level for level in few.getpalette() or []])
+    return few
+
+
+def _saved(pixels: "Image") -> bytes:
     out = io.BytesIO()
     pixels.save(out, format="PNG", compress_level=3)
     return out.getvalue()

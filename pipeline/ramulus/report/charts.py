@@ -5,7 +5,7 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 
 from ..quantities import pa_to_mmhg
-from .canvas import BLUE, GREEN, INK, ORANGE, SOFT, chart, length_unit, log_ticks, readable
+from .canvas import BLUE, GREEN, INK, ORANGE, SOFT, chart, key, length_unit, log_ticks, readable
 from .content import ReportContent, estimate, numbers, plain_name
 
 if TYPE_CHECKING:
@@ -32,20 +32,22 @@ def radii(content: ReportContent) -> "Figure | str":
     low, high = radius[use].min(), radius[use].max()
     edges = np.geomspace(low * 0.97, high * 1.03, 31)
     figure, axes = chart("Length by radius", x="radius in µm", y="length in mm", log="x")
-    groups = [(use & resolved, BLUE, "resolved"), (use & ~resolved, ORANGE, "too thin to size")]
-    groups = [g for g in groups if g[0].any()]
-    axes.hist(
-        [radius[g] for g, _, _ in groups], bins=edges.tolist(),
-        weights=[weight[g] for g, _, _ in groups], stacked=True,
-        color=[c for _, c, _ in groups], label=[name for _, _, name in groups],
-    )  # fmt: skip
+    below = np.zeros(len(edges) - 1)
+    for group, colour, name in (
+        (use & resolved, BLUE, "resolved"), (use & ~resolved, ORANGE, "too thin to size"),
+    ):  # fmt: skip
+        if group.any():
+            top = below + np.histogram(radius[group], bins=edges, weights=weight[group])[0]
+            axes.stairs(top, edges, baseline=below, fill=True, color=colour, label=name)
+            below = top
+    axes.set_ylim(0, None)
     limit = estimate(content.summary.get("smallest_resolved_radius_um"))[0]
     if np.isfinite(limit):
         axes.axvline(limit, color=INK, linewidth=1.2, linestyle=(0, (4, 2)))
         words = f"smallest resolved radius {readable(limit)} µm"
         axes.plot([], [], color=INK, linewidth=1.2, linestyle=(0, (4, 2)), label=words)
     log_ticks(axes, "x")
-    _key(axes)
+    key(axes)
     return figure
 
 
@@ -67,7 +69,7 @@ def radius_methods(content: ReportContent) -> "Figure | str":
     axes.plot(ends, ends, color=INK, linewidth=1, label="equal")
     log_ticks(axes, "x")
     log_ticks(axes, "y")
-    _key(axes)
+    key(axes)
     return figure
 
 
@@ -90,7 +92,7 @@ def planes(content: ReportContent) -> "Figure | str":
             linewidth=1.2, linestyle=(0, (5, 2)), label="mean grey value",
         )  # fmt: skip
     axes.set_ylim(min(0.0, *axes.get_ylim()), 1.08)
-    _key(axes)
+    key(axes)
     return figure
 
 
@@ -119,7 +121,7 @@ def thickness(content: ReportContent) -> "Figure | str":
     axes.fill_between(middle, low, high, color=BLUE, alpha=0.18, linewidth=0, label="quartiles")
     axes.plot(middle, median, "o-", color=BLUE, markersize=3.5, linewidth=1.2, label="median")
     log_ticks(axes, "y")
-    _key(axes)
+    key(axes)
     return figure
 
 
@@ -160,7 +162,7 @@ def order_chart(
     axes.set_xlim(order.min() - 0.4, order.max() + 0.4)
     axes.margins(y=0.12)
     log_ticks(axes, "y")
-    _key(axes)
+    key(axes)
     return figure
 
 
@@ -203,7 +205,7 @@ def cube_law(content: ReportContent) -> "Figure | str":
         )  # fmt: skip
     log_ticks(axes, "x")
     log_ticks(axes, "y")
-    _key(axes)
+    key(axes)
     return figure
 
 
@@ -213,7 +215,7 @@ def _exponent_line(axes: "Axes", span: np.ndarray, entry: Any) -> None:
         return
     # Equal daughters under exponent g carry 2**(1 - 3 / g) of the parent's cube.
     factor = [2 ** (1 - 3 / max(g, 0.1)) for g in (value, low, high)]
-    words = f"pooled exponent {readable(value)}, equal daughters"
+    words = f"pooled {readable(value)} (equal daughters)"
     axes.plot(span, factor[0] * span, color=ORANGE, linewidth=1.4, label=words)
     if np.isfinite(factor).all():
         axes.fill_between(
@@ -231,7 +233,8 @@ def cube_residuals(content: ReportContent) -> "Figure | str":
     if not known.any():
         return "no junction that is used has a residual"
     order = orders[parent[known].astype(int)]
-    residual, order = residual[known][np.isfinite(order)], order[np.isfinite(order)]
+    ordered = order >= 1
+    residual, order = residual[known][ordered], order[ordered]
     if not len(order):
         return "no parent has an order"
     figure, axes = chart(
@@ -247,7 +250,7 @@ def cube_residuals(content: ReportContent) -> "Figure | str":
     axes.yaxis.set_major_formatter(lambda value, _: readable(value))
     axes.set_xticks(np.unique(order))
     axes.set_xlim(order.min() - 0.6, order.max() + 0.6)
-    _key(axes)
+    key(axes)
     return figure
 
 
@@ -268,7 +271,7 @@ def pressures(content: ReportContent) -> "Figure | str":
     if not known.any():
         return "no order carries flow"
     figure, axes = chart(
-        "Pressure by order", x=f"{_ORDER}, the inlet's on the left", y="mean pressure in Pa"
+        "Pressure by order", x=f"{_ORDER}, the inlet's on the left", y="mean pressure in Pa (mmHg)"
     )
     axes.plot(
         order[known], entry[known], "o-", color=BLUE, markersize=5, linewidth=1.2,
@@ -280,14 +283,10 @@ def pressures(content: ReportContent) -> "Figure | str":
     )  # fmt: skip
     axes.set_xticks(order[known])
     axes.set_xlim(order[known].max() + 0.5, order[known].min() - 0.5)
-    mmhg = pa_to_mmhg(1.0)
-    both_ways: Any = (lambda p: p * mmhg, lambda p: p / mmhg)
-    right = axes.secondary_yaxis("right", functions=both_ways)
-    right.set_ylabel("mmHg", fontsize=9, color=INK)
-    right.tick_params(colors=SOFT, labelcolor=INK, labelsize=8.5)
-    right.spines["right"].set_color(SOFT)
-    axes.set_position((0.17, 0.16, 0.695, 0.73))
-    _key(axes)
+    axes.yaxis.set_major_formatter(lambda pa, _: f"{pa:,.0f} ({pa_to_mmhg(pa):.0f})")
+    axes.set_position((0.225, 0.16, 0.745, 0.7))
+    axes.yaxis.set_label_coords(-0.235, 0.5)
+    key(axes)
     return figure
 
 
@@ -310,7 +309,7 @@ def dominance(content: ReportContent) -> "Figure | str":
     axes.set_ylim(0, 1.04)
     axes.set_xlim(0.9, max(len(share), 2) * 1.1)
     log_ticks(axes, "x")
-    _key(axes, loc="lower right")
+    key(axes)
     return figure
 
 
@@ -323,7 +322,7 @@ def resistances(content: ReportContent) -> "Figure | str":
     if not len(known):
         return "no path joins the inlet to an outlet"
     figure, axes = chart("Resistance by outlet rule and viscosity", x="Pa s/m³", y="", log="x")
-    axes.set_position((0.4, 0.16, 0.57, 0.73))
+    axes.set_position((0.4, 0.16, 0.57, 0.7))
     rows = np.arange(len(known))
     for suffix, colour, width, words in (
         ("_common", ORANGE, 5.0, "shared error"), ("", BLUE, 1.6, "random error"),
@@ -340,11 +339,11 @@ def resistances(content: ReportContent) -> "Figure | str":
         for k in known
     ]
     axes.set_yticks(rows, names)
-    axes.set_ylim(len(known) - 0.4, -0.6 - 0.25 * len(known))
+    axes.set_ylim(len(known) - 0.4, -0.6)
     left, right = axes.get_xlim()
     axes.set_xlim(left * 0.8, right * 1.25)
     log_ticks(axes, "x")
-    _key(axes)
+    key(axes)
     return figure
 
 
@@ -363,14 +362,9 @@ def twin_errors(content: ReportContent) -> "Figure | str":
     axes.plot(place, median, "o", color=BLUE, markersize=5, label="median")
     axes.set_xticks(place, labels)
     axes.set_xlim(-0.6, len(rows) - 0.4)
-    _key(axes)
+    key(axes)
     return figure
 
 
 def _class_name(low: float, high: float) -> str:
     return f"{low:g} and more" if high > 1e6 else f"{low:g} to {high:g}"
-
-
-def _key(axes: "Axes", **place: Any) -> None:
-    if axes.get_legend_handles_labels()[0]:
-        axes.legend(fontsize=8, frameon=True, framealpha=0.85, edgecolor="none", **place)

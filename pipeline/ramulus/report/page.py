@@ -9,7 +9,7 @@ from ..trust.flags import Flag
 from .content import ReportContent
 from .figures import figures
 from .scene import plotly_script, scene_text
-from .views import outlines
+from .views import MOST_SEGMENTS, shown_segments
 from .wording import (
     CAUTION,
     DEFINITIONS,
@@ -106,7 +106,7 @@ def report_html(
         figures={_stem(name): b64encode(png).decode() for name, png in drawn.items()},
         reasons={_stem(name): reason for name, reason in left_out.items()},
         has_image=bool(content.projections),
-        n_drawn=len(outlines(content.graph).segments),
+        n_drawn=len(shown_segments(content.graph, MOST_SEGMENTS)),
         n_segments=content.graph.n_segments,
         twin=_twin(content.twin),
         resistance=list(resistance_rows(content)),

@@ -8,12 +8,14 @@ import zlib
 from base64 import b64encode
 from collections.abc import Iterator
 from functools import cache
-from importlib.resources import files
+from importlib.util import find_spec
+from pathlib import Path
 from typing import Any
 
 import numpy as np
 import pandas as pd
 
+from ..errors import UnusableInputError
 from .canvas import length_unit
 from .content import ReportContent, numbers
 from .views import shown_segments
@@ -39,9 +41,9 @@ _SHOWN = (
     ("velocity_um_per_s", "velocity", "µm/s"), ("wall_shear_stress_pa", "wall shear stress", "Pa"),
     ("resistance_share", "share of the resistance", ""),
 )  # fmt: skip
-_MOST_SEGMENTS = 12_000
-_MOST_POINTS = 30_000
-_LARGEST_SIDE = 420
+_MOST_SEGMENTS = 8_000
+_MOST_POINTS = 24_000
+_LARGEST_SIDE = 320
 _STEPS = 65535  # of a position, in 16 bits
 
 
@@ -94,7 +96,7 @@ def packed(text: str) -> str:
     >>> zlib.decompress(b64decode(packed("aaaa"))).decode()
     'aaaa'
     """
-    return b64encode(zlib.compress(text.encode(), 6)).decode()
+    return b64encode(zlib.compress(text.encode(), 5)).decode()
 
 
 @cache
@@ -103,7 +105,11 @@ def plotly_script() -> str:
 
     The package ships the full script alone (4.8 MB); packed it takes 2.0 MB of the page.
     """
-    script = files("plotly") / "package_data" / "plotly.min.js"
+    found = find_spec("plotly")  # without importing it, which takes as long as the packing
+    if found is None or found.origin is None:
+        msg = "the report needs the package 'plotly': pip install plotly"
+        raise UnusableInputError(msg)
+    script = Path(found.origin).parent / "package_data" / "plotly.min.js"
     return packed(script.read_text(encoding="utf-8"))
 
 

@@ -1,6 +1,5 @@
 """The image seen along z, y and x, bare and with the graph over it at true vessel width."""
 
-from collections.abc import Iterator
 from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any
 
@@ -14,12 +13,12 @@ if TYPE_CHECKING:
     from matplotlib.axes import Axes
     from matplotlib.figure import Figure
 
-__all__ = ["image_views", "outlines", "shown_segments"]
+__all__ = ["MOST_SEGMENTS", "image_views", "shown_segments"]
 
 _WIDTH_IN, _LEFT_IN, _RIGHT_IN, _TOP_IN, _BOTTOM_IN, _GAP_IN = 9.2, 0.62, 0.1, 0.28, 0.8, 0.1
 _MOST_HEIGHT_IN = 11.0
-_MOST_SEGMENTS = 12_000
-_MOST_POINTS = 120_000
+MOST_SEGMENTS = 12_000
+_MOST_POINTS = 60_000
 _MOST_DOTS = 600
 # Axis of view, then the axes across and down.
 _VIEWS = {"z": (2, 1), "y": (2, 0), "x": (0, 1)}
@@ -67,9 +66,11 @@ def image_views(content: ReportContent, *, with_graph: bool) -> "Figure | str":
         return "there is no image: the input was a graph"
     if not content.graph.n_segments:
         return "the graph has no segment"
+    drawn = _drawn(content.graph) if with_graph else None
+    if drawn is not None and not len(drawn.segments):
+        return "no segment has a radius"
     box = _box(content)
     figure = blank(_WIDTH_IN, box.height_in)
-    drawn = outlines(content.graph) if with_graph else None
     for view in _VIEWS:
         axes = figure.add_axes(box.place(view))
         _frame(axes, view, box)
@@ -101,26 +102,26 @@ def _box(content: ReportContent) -> _Box:
 
 def _frame(axes: "Axes", view: str, box: _Box) -> None:
     """Set limits to the volume, y and z downwards as in an image, and label the outer sides."""
-    from matplotlib.ticker import MaxNLocator  # noqa: PLC0415 - heavy to import
+    from matplotlib.ticker import MaxNLocator, NullLocator  # noqa: PLC0415 - heavy to import
 
     across, down = _VIEWS[view]
     unit, um = length_unit(float(box.size_um.max()))
     high = box.low_um + box.size_um
     axes.set_xlim(box.low_um[across], high[across])
     axes.set_ylim(high[down], box.low_um[down])
-    for spine in axes.spines.values():
-        spine.set_color(RULE)
-    axes.tick_params(colors=SOFT, labelcolor=INK, labelsize=8)
-    for axis, k in ((axes.xaxis, across), (axes.yaxis, down)):
+    axes.grid(visible=False)
+    for axis, k, labelled in ((axes.xaxis, across, view != "z"), (axes.yaxis, down, view != "x")):
+        if not labelled:
+            axis.set_major_locator(NullLocator())
+            continue
         axis.set_major_locator(MaxNLocator(nbins=max(1, int(box.size_um[k] * box.scale / 0.7))))
         axis.set_major_formatter(lambda value, _: readable(value / um, 4))
-    axes.tick_params(labelbottom=view != "z", labelleft=view != "x")
     # Fixed places spare matplotlib the search for some that clear the numbers.
     if view != "z":
-        axes.set_xlabel(f"{'zyx'[across]} in {unit}", fontsize=8.5, color=INK)
+        axes.set_xlabel(f"{'zyx'[across]} in {unit}")
         axes.xaxis.set_label_coords(0.5, -0.26 / float(box.size_um[down] * box.scale))
     if view != "x":
-        axes.set_ylabel(f"{'zyx'[down]} in {unit}", fontsize=8.5, color=INK)
+        axes.set_ylabel(f"{'zyx'[down]} in {unit}")
         axes.yaxis.set_label_coords(-0.42 / float(box.size_um[across] * box.scale), 0.5)
 
 
@@ -161,26 +162,27 @@ def _image(axes: "Axes", view: str, content: ReportContent) -> None:
 
 
 @dataclass(frozen=True, slots=True)
-class _Outlines:
-    """The segments that are drawn, wide ones first, and their points."""
+class _Drawn:
+    """The segments that are drawn, wide ones first: mean radius, and where their points start."""
 
     segments: np.ndarray
     radius_um: np.ndarray
-    points: list[np.ndarray]
+    points: np.ndarray
+    starts: np.ndarray
 
 
-def outlines(graph: CentrelineGraph) -> _Outlines:
-    """Choose the segments to draw, and at most as many of their points as a picture can show."""
-    segments = shown_segments(graph, _MOST_SEGMENTS)
-    radius = graph.segment_radius_um()[segments]
-    total = int(graph.points_per_segment[segments].sum())
-    every = max(1, int(np.ceil(total / _MOST_POINTS)))
-    points = []
-    for segment in segments.tolist():
-        whole = graph.points_of(segment)
-        index = np.arange(whole.start, whole.stop, every)
-        points.append(index if index[-1] == whole.stop - 1 else np.append(index, whole.stop - 1))
-    return _Outlines(segments, radius, points)
+def _drawn(graph: CentrelineGraph) -> _Drawn:
+    """Choose the segments, and no more of their points than a picture can show."""
+    segments = shown_segments(graph, MOST_SEGMENTS)
+    start, per = graph.point_offsets[segments], graph.points_per_segment[segments]
+    every = max(1, int(np.ceil(int(per.sum()) / _MOST_POINTS)))
+    counts = (per - 2) // every + 2
+    starts = np.concatenate(([0], np.cumsum(counts))).astype(np.int64)
+    owner = np.repeat(np.arange(len(segments)), counts)
+    within = np.arange(len(owner)) - starts[owner]
+    last = within == counts[owner] - 1
+    points = start[owner] + np.where(last, per[owner] - 1, within * every)
+    return _Drawn(segments, graph.segment_radius_um()[segments], points, starts)
 
 
 def shown_segments(graph: CentrelineGraph, most: int) -> np.ndarray:
@@ -191,45 +193,60 @@ def shown_segments(graph: CentrelineGraph, most: int) -> np.ndarray:
     return known[:most]
 
 
-def _vessels(axes: "Axes", view: str, content: ReportContent, drawn: _Outlines) -> None:
-    from matplotlib.collections import PolyCollection  # noqa: PLC0415 - heavy to import
+def _vessels(axes: "Axes", view: str, content: ReportContent, drawn: _Drawn) -> None:
+    """Draw each vessel as a light band between its two sides; many vessels as finer ones."""
+    from matplotlib.collections import LineCollection, PolyCollection  # noqa: PLC0415
 
-    graph = content.graph
-    resolved = graph.segment_resolved[drawn.segments]
-    shapes = list(_shapes(graph, view, drawn))
+    left, right = _sides(content.graph, view, drawn)
     colours = _colours(drawn.radius_um, dark=bool(content.projections))
+    many = len(drawn.segments) > 800
+    faces = colours.copy()
+    faces[:, 3] = 0.12 if many else 0.25
+    bands = [np.concatenate([a, b[::-1]]) for a, b in zip(left, right, strict=True)]
+    axes.add_collection(PolyCollection(bands, facecolors=faces, edgecolors="none"))
+    resolved = content.graph.segment_resolved[drawn.segments]
     for chosen, style in ((resolved, "solid"), (~resolved, (0, (2, 1.5)))):
-        picked = np.flatnonzero(chosen)
-        if not len(picked):
-            continue
-        faces = colours[picked].copy()
-        faces[:, 3] = 0.22
-        axes.add_collection(
-            PolyCollection(
-                [shapes[k] for k in picked], facecolors=faces, edgecolors=colours[picked],
-                linewidths=0.9, linestyles=[style],
+        picked = np.flatnonzero(chosen).tolist()
+        if picked:
+            lines = [side[k] for k in picked for side in (left, right)]
+            edges = np.repeat(colours[picked], 2, axis=0)
+            axes.add_collection(
+                LineCollection(
+                    lines, colors=edges, linewidths=0.6 if many else 1.0, linestyles=[style]
+                )
             )
-        )  # fmt: skip
     _nodes(axes, view, content)
 
 
-def _shapes(graph: CentrelineGraph, view: str, drawn: _Outlines) -> Iterator[np.ndarray]:
-    """Yield each vessel's outline: its centreline's projection, a radius to either side."""
+def _sides(
+    graph: CentrelineGraph, view: str, drawn: _Drawn
+) -> tuple[list[np.ndarray], list[np.ndarray]]:
+    """Return each vessel's two sides: its centreline's projection, a radius to either side.
+
+    A vessel along the line of sight has no such sides; it is a disc.
+    """
     across, down = _VIEWS[view]
-    turn = np.linspace(0, 2 * np.pi, 24, endpoint=False)
-    disc = np.stack([np.cos(turn), np.sin(turn)], axis=1)
-    for index, mean_um in zip(drawn.points, drawn.radius_um.tolist(), strict=True):
-        line = graph.point_position_um[index][:, [across, down]]
-        radius = graph.point_radius_um[index]
-        radius = np.where(np.isfinite(radius), radius, mean_um)
-        if np.linalg.norm(np.diff(line, axis=0), axis=1).sum() < mean_um:
-            yield line.mean(axis=0) + mean_um * disc  # it runs along the line of sight
-            continue
-        tangent = np.gradient(line, axis=0)
-        length = np.linalg.norm(tangent, axis=1, keepdims=True)
-        tangent = np.divide(tangent, length, out=np.zeros_like(tangent), where=length > 0)
-        side = radius[:, None] * tangent[:, ::-1] * (-1.0, 1.0)
-        yield np.concatenate([line + side, (line - side)[::-1]])
+    line = graph.point_position_um[drawn.points][:, [across, down]]
+    first, last = drawn.starts[:-1], drawn.starts[1:] - 1
+    counts = np.diff(drawn.starts)
+    radius = graph.point_radius_um[drawn.points]
+    radius = np.where(np.isfinite(radius), radius, np.repeat(drawn.radius_um, counts))
+    before, after = np.arange(len(line)) - 1, np.arange(len(line)) + 1
+    before[first], after[last] = first, last
+    tangent = line[after] - line[before]
+    length = np.linalg.norm(tangent, axis=1, keepdims=True)
+    tangent = np.divide(tangent, length, out=np.zeros_like(tangent), where=length > 0)
+    side = radius[:, None] * tangent[:, ::-1] * (-1.0, 1.0)
+    left, right = (np.split(s, drawn.starts[1:-1]) for s in (line + side, line - side))
+    step = np.linalg.norm(line - line[before], axis=1)
+    seen = np.add.reduceat(step, first) if len(first) else step
+    turn = np.linspace(0, np.pi, 13)
+    half = np.stack([np.cos(turn), np.sin(turn)], axis=1)
+    for k in np.flatnonzero(seen < drawn.radius_um).tolist():
+        middle = line[first[k] : last[k] + 1].mean(axis=0)
+        left[k] = middle + drawn.radius_um[k] * half
+        right[k] = middle + drawn.radius_um[k] * half * (1.0, -1.0)
+    return left, right
 
 
 def _colours(radius_um: np.ndarray, *, dark: bool) -> np.ndarray:
@@ -263,7 +280,7 @@ def _nodes(axes: "Axes", view: str, content: ReportContent) -> None:
     )  # fmt: skip
 
 
-def _legend(figure: "Figure", box: _Box, content: ReportContent, drawn: _Outlines) -> None:
+def _legend(figure: "Figure", box: _Box, content: ReportContent, drawn: _Drawn) -> None:
     """Explain colour and marks in the free strip below the views."""
     from matplotlib.cm import ScalarMappable  # noqa: PLC0415 - heavy to import
     from matplotlib.lines import Line2D  # noqa: PLC0415
@@ -275,9 +292,8 @@ def _legend(figure: "Figure", box: _Box, content: ReportContent, drawn: _Outline
     ticks = np.geomspace(norm.vmin, norm.vmax, 5)
     bar.set_ticks(ticks.tolist(), labels=[readable(t, 2) for t in ticks], minor=False)
     bar.ax.minorticks_off()
-    bar.ax.tick_params(labelsize=8, colors=SOFT, labelcolor=INK)
     bar.outline.set_edgecolor(RULE)
-    figure.text(0.61, 0.38 / tall, "radius in µm", ha="right", va="center", fontsize=8.5, color=INK)
+    figure.text(0.61, 0.38 / tall, "radius in µm", ha="right", va="center", fontsize=9)
     marks: list[Any] = [
         Line2D([], [], marker="s", color=ORANGE, linestyle="", markersize=6, label="inlet")
     ]
