@@ -40,8 +40,8 @@ def no_twin(graph, *, shape, facts, line, settings):
     return Twin([], 0.2, 0.1, 0.7, 1.0, 1.0, 2.5, settings.draws, shape)
 
 
-def report(results, *, summary, flags, twin, title, settings):
-    del results, summary, twin
+def report(results, *, summary, flags, twin, title, settings, provenance):
+    del results, summary, twin, provenance
     page = f"<h1>{title}</h1>{[flag.code for flag in flags]}<pre>{settings}</pre>"
     return {"report.html": page.encode(), "figures/radii.png": b"png"}
 

@@ -199,9 +199,20 @@ def _made(
         files |= stages.run(
             "report", write_report, results, summary=summary, flags=flags,
             twin=twin.to_json() if twin else None, title=configuration.report.title,
-            settings=_settings_shown(configuration),
+            settings=_settings_shown(configuration), provenance=_provenance_shown(intake),
         )  # fmt: skip
     return files
+
+
+def _provenance_shown(intake: Intake) -> dict[str, str]:
+    """Return what the report shows of a run: nothing that differs between two of the same."""
+    facts = program_facts()
+    versions = ", ".join(f"{name} {number}" for name, number in facts["libraries"].items())
+    return {
+        "input": intake.file, "read as": intake.kind, "SHA-256 of the input": intake.sha256,
+        "ramulus": facts["ramulus"], "SHA-256 of its source": facts["code_sha256"],
+        "Python": facts["python"], "libraries": versions,
+    }  # fmt: skip
 
 
 def _settings_shown(configuration: Configuration) -> str:
