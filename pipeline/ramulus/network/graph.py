@@ -2,14 +2,16 @@
 
 from collections.abc import Iterable, Sequence
 from dataclasses import dataclass, replace
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
-import networkx as nx
 import numpy as np
 import pandas as pd
 
 from .._checks import checked_points
 from ..errors import UnusableInputError
+
+if TYPE_CHECKING:
+    import networkx as nx
 
 __all__ = ["NODE_KINDS", "RADIUS_METHODS", "CentrelineGraph"]
 
@@ -283,8 +285,10 @@ class CentrelineGraph:
 
     # ------------------------------------------------------------------ views
 
-    def to_networkx(self) -> nx.MultiGraph:
+    def to_networkx(self) -> "nx.MultiGraph":
         """Return a MultiGraph: nodes with position and kind, edges keyed by segment id."""
+        import networkx as nx  # noqa: PLC0415 - costs every command's start 0.15 s
+
         graph = nx.MultiGraph()
         kinds = self.node_kind_names()
         for node, (z, y, x) in enumerate(self.node_position_um.tolist()):

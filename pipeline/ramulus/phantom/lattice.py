@@ -1,18 +1,20 @@
 """Weave loop networks: a jittered mesh of junctions of three vessels, cut by the volume's faces."""
 
 from dataclasses import dataclass
+from typing import TYPE_CHECKING
 
-import networkx as nx
 import numpy as np
-from scipy.interpolate import BSpline
 from scipy.spatial import cKDTree
 from scipy.spatial.transform import Rotation
-from scipy.stats import norm
+from scipy.special import ndtr, ndtri
 
 from .._settings import Settings, setting
 from ..errors import UnusableInputError
 from ..network.graph import NODE_KINDS, CentrelineGraph
 from .paths import Box, segments_keep_clear
+
+if TYPE_CHECKING:
+    import networkx as nx
 
 __all__ = ["LatticeSettings", "weave"]
 
@@ -115,8 +117,10 @@ def weave(
 # ---------------------------------------------------------------------- the straight mesh
 
 
-def _mesh(settings: LatticeSettings, box: Box, rng: np.random.Generator) -> nx.Graph:
+def _mesh(settings: LatticeSettings, box: Box, rng: np.random.Generator) -> "nx.Graph":
     """Return the mesh inside the box: nodes with `place`, edges cut by a face to `border` nodes."""
+    import networkx as nx  # noqa: PLC0415 - costs every command's start 0.15 s
+
     places = _places(settings, box, rng)
     pairs = cKDTree(places[1]).query_pairs(1.05 * settings.spacing_um, output_type="ndarray")
     room = 2 * settings.max_radius_um + settings.clearance_um
@@ -168,8 +172,10 @@ def _crossing(box: Box, start: np.ndarray, toward: np.ndarray, room_um: float) -
     return np.asarray(path[-1])
 
 
-def _thinned(mesh: nx.Graph, settings: LatticeSettings, rng: np.random.Generator) -> nx.Graph:
+def _thinned(mesh: "nx.Graph", settings: LatticeSettings, rng: np.random.Generator) -> "nx.Graph":
     """Leave out a share of the edges, then dead ends inside; keep the largest connected part."""
+    import networkx as nx  # noqa: PLC0415 - costs every command's start 0.15 s
+
     graph = mesh.copy()
     edges = sorted(graph.edges)
     dropped = rng.permutation(len(edges))[: int(settings.missing * len(edges))]
@@ -184,7 +190,7 @@ def _thinned(mesh: nx.Graph, settings: LatticeSettings, rng: np.random.Generator
     return graph.subgraph(largest)
 
 
-def _dead_ends(graph: nx.Graph) -> list[int]:
+def _dead_ends(graph: "nx.Graph") -> list[int]:
     """Return the nodes that lead nowhere: alone, or of degree 1 inside the volume."""
     return [n for n in graph if graph.degree[n] < (1 if graph.nodes[n]["cut"] else 2)]
 
@@ -202,7 +208,7 @@ class _Chains:
     corners_um: list[np.ndarray]
 
 
-def _chains(mesh: nx.Graph) -> _Chains:
+def _chains(mesh: "nx.Graph") -> _Chains:
     """Join the edges at nodes of degree 2 into one vessel."""
     kept = sorted(node for node in mesh if mesh.degree[node] != 2)
     number = {node: k for k, node in enumerate(kept)}
@@ -227,10 +233,10 @@ def _chains(mesh: nx.Graph) -> _Chains:
 def _radii(settings: LatticeSettings, n: int, rng: np.random.Generator) -> np.ndarray:
     """Draw lognormal radii within the limits: by quantile, so that no two are alike."""
     low, high = (
-        norm.cdf(np.log(limit / settings.radius_um) / max(settings.radius_spread, 1e-9))
+        ndtr(np.log(limit / settings.radius_um) / max(settings.radius_spread, 1e-9))
         for limit in (settings.min_radius_um, settings.max_radius_um)
     )
-    drawn = norm.ppf(rng.uniform(low, high, size=n)) * settings.radius_spread
+    drawn = ndtri(rng.uniform(low, high, size=n)) * settings.radius_spread
     return np.clip(
         settings.radius_um * np.exp(drawn), settings.min_radius_um, settings.max_radius_um
     )
@@ -263,6 +269,8 @@ def _clear_paths(
 
 def _bent(corners_um: np.ndarray, swing: np.ndarray, step_um: float) -> np.ndarray:
     """Round a chain's corners off and swing it sideways, its two ends kept."""
+    from scipy.interpolate import BSpline  # noqa: PLC0415 - costs every command's start 0.3 s
+
     n = len(corners_um)
     degree = min(2, n - 1)
     knots = np.concatenate([np.zeros(degree), np.linspace(0, 1, n - degree + 1), np.ones(degree)])
