@@ -107,7 +107,8 @@ def test_a_second_run_on_the_same_folder_is_refused(out):
 def test_the_lock_of_a_killed_process_holds_nobody_up(tmp_path):
     code = (
         "import sys, os, signal; from pathlib import Path; from ramulus._folder import *;"
-        "held = locked_folder(Path(sys.argv[1])); held.__enter__(); os.kill(os.getpid(), signal.SIGKILL)"
+        "held = locked_folder(Path(sys.argv[1])); held.__enter__();"
+        "os.kill(os.getpid(), signal.SIGKILL)"
     )
     environment = os.environ | {"PYTHONPATH": str(Path(__file__).parents[1] / "pipeline")}
     command = [sys.executable, "-c", code, str(tmp_path / "out")]

@@ -1,8 +1,11 @@
 """The working grid: grey values on voxels that are nearly cubes, and its levels of half size."""
 
+import itertools
+from collections.abc import Callable
 from concurrent.futures import ThreadPoolExecutor
 from dataclasses import dataclass
 
+import numba
 import numpy as np
 
 from .._checks import checked_spacing_um, checked_volume
@@ -81,11 +84,14 @@ def levels_of(volume: np.ndarray, *, spacing_um: tuple[float, float, float], cou
     return levels
 
 
-def in_threads(work, count: int, *, parts: int = 8, workers: int = 2) -> None:
-    """Call work(start, stop) over `count` items cut in parts; the parts must be independent."""
+def in_threads(work: Callable[[int, int], None], count: int, *, parts: int = 8) -> None:
+    """Call work(start, stop) over `count` items cut in parts; the parts must be independent.
+
+    As many threads as numba may use (`numba.set_num_threads`).
+    """
     bounds = np.linspace(0, count, min(parts, count) + 1).astype(int)
-    with ThreadPoolExecutor(workers) as pool:
-        for future in [pool.submit(work, a, b) for a, b in zip(bounds[:-1], bounds[1:], strict=True)]:
+    with ThreadPoolExecutor(numba.get_num_threads()) as pool:
+        for future in [pool.submit(work, a, b) for a, b in itertools.pairwise(bounds.tolist())]:
             future.result()
 
 

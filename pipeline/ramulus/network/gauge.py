@@ -4,13 +4,13 @@ Where the image is a mask the same fit with known levels is an area-equivalent r
 """
 
 import functools
-from concurrent.futures import ThreadPoolExecutor
 from dataclasses import dataclass
 
 import numpy as np
 
 from .._settings import Settings, setting
 from ..errors import UnusableInputError
+from ..image.grid import in_threads
 from . import _gauge_kernels as kernels
 from .graph import RADIUS_METHODS, CentrelineGraph
 from .recentre import recentre
@@ -64,7 +64,7 @@ class Gauged:
 def gauge(
     graph: CentrelineGraph, volume: np.ndarray, *, spacing_um: tuple[float, float, float],
     origin_um: tuple[float, float, float] = (0.0, 0.0, 0.0), settings: GaugeSettings,
-    known_levels: bool = False, workers: int = 2,
+    known_levels: bool = False,
 ) -> Gauged:  # fmt: skip
     """Return the graph with a radius and its standard error at every point.
 
@@ -90,7 +90,7 @@ def gauge(
     if not graph.n_segments:
         msg = "gauge: the graph has no segment, so there is nothing to size"
         raise UnusableInputError(msg)
-    sampler = _Sampler(graph, volume, spacing_um, origin_um, known_levels, workers)
+    sampler = _Sampler(graph, volume, spacing_um, origin_um, known_levels)
     stations = _stations(graph, step_um=sampler.step_um)
     blur = _blur(sampler, stations, settings)
     fit = sampler.fit(stations, blur, stations["map_um"], None)
@@ -141,8 +141,8 @@ class _Fit:
 class _Sampler:
     """What all fits of one graph and image share."""
 
-    def __init__(self, graph, volume, spacing_um, origin_um, known_levels, workers):  # noqa: ANN001
-        self.graph, self.volume, self.workers = graph, np.ascontiguousarray(volume), workers
+    def __init__(self, graph, volume, spacing_um, origin_um, known_levels):  # noqa: ANN001
+        self.graph, self.volume = graph, np.ascontiguousarray(volume)
         self.spacing_um = spacing_um
         self.inverse = 1.0 / np.asarray(spacing_um)
         self.origin = np.asarray(origin_um, dtype=np.float64)
@@ -163,14 +163,7 @@ class _Sampler:
             blur.sigma_xy_um, blur.sigma_z_um, log_contrast, contrast_sd, free_blur,
             self.known_levels, blurred_disc_table(),
         )  # fmt: skip
-        bounds = np.linspace(0, n, 4 * self.workers + 1).astype(int)
-        with ThreadPoolExecutor(self.workers) as pool:
-            jobs = [
-                pool.submit(kernels.gauge_stations, *arguments, a, b, out, frames)
-                for a, b in zip(bounds[:-1], bounds[1:], strict=True)
-            ]
-            for job in jobs:
-                job.result()
+        in_threads(lambda a, b: kernels.gauge_stations(*arguments, a, b, out, frames), n, parts=32)
         good = (out[:, 11] > 0) & np.isfinite(out[:, :11]).all(axis=1)
         return _Fit(*(out[:, k] for k in range(4)), out[:, 4:6], *(out[:, k] for k in range(6, 11)), good, frames)
 
