@@ -13,6 +13,7 @@ from .background import BackgroundSettings, background_map, noise_sd
 from .enhance import TubeMap
 from .grid import in_threads
 from .mask import Mask
+from .threshold import closed_lumens, threshold_mask
 
 __all__ = ["SegmentSettings", "Segmented", "segment"]
 
@@ -86,7 +87,17 @@ def segment(
     base, base_level = background_map(tubes.levels, radius_um=radius_um, settings=background)
     reference = _reference_contrast(tubes)
     fields, strong, seeds = _seed_fields(tubes, base, base_level, reference, settings)
-    inside = _inside(tubes, fields)
+    if settings.method == "half_level":
+        inside = _inside(tubes, fields)
+    else:
+        inside = threshold_mask(
+            tubes.levels[0].image, method=settings.method, threshold=settings.threshold,
+            threshold_low=settings.threshold_low,
+        )  # fmt: skip
+        # One threshold finds its own parts: none needs a seed of the enhancement.
+        strong = np.ones_like(strong)
+    if settings.wall_stained:
+        inside = closed_lumens(inside)
     if region is not None:
         inside &= region
     inside = _without_weak_parts(inside, strong, settings)
