@@ -231,22 +231,36 @@ def _sides(
     counts = np.diff(drawn.starts)
     radius = graph.point_radius_um[drawn.points]
     radius = np.where(np.isfinite(radius), radius, np.repeat(drawn.radius_um, counts))
-    before, after = np.arange(len(line)) - 1, np.arange(len(line)) + 1
-    before[first], after[last] = first, last
-    tangent = line[after] - line[before]
-    length = np.linalg.norm(tangent, axis=1, keepdims=True)
-    tangent = np.divide(tangent, length, out=np.zeros_like(tangent), where=length > 0)
+    step = np.linalg.norm(np.diff(line, axis=0, prepend=line[:1]), axis=1)
+    step[first] = 0.0
+    tangent = _tangents(line, step, radius, np.repeat(first, counts), np.repeat(last, counts))
     side = radius[:, None] * tangent[:, ::-1] * (-1.0, 1.0)
     left, right = (np.split(s, drawn.starts[1:-1]) for s in (line + side, line - side))
-    step = np.linalg.norm(line - line[before], axis=1)
     seen = np.add.reduceat(step, first) if len(first) else step
     turn = np.linspace(0, np.pi, 13)
     half = np.stack([np.cos(turn), np.sin(turn)], axis=1)
-    for k in np.flatnonzero(seen < drawn.radius_um).tolist():
+    for k in np.flatnonzero(seen < 2 * drawn.radius_um).tolist():
         middle = line[first[k] : last[k] + 1].mean(axis=0)
         left[k] = middle + drawn.radius_um[k] * half
         right[k] = middle + drawn.radius_um[k] * half * (1.0, -1.0)
     return left, right
+
+
+def _tangents(
+    line: np.ndarray, step: np.ndarray, radius: np.ndarray, first: np.ndarray, last: np.ndarray
+) -> np.ndarray:
+    """Return directions over a radius of length to either side, so that short turns do not show.
+
+    `first` and `last` are each point's segment's end points.
+    """
+    arc, here = np.cumsum(step), np.arange(len(line))
+    before = np.searchsorted(arc, arc - radius)
+    before = np.clip(before, first, np.maximum(here - 1, first))
+    after = np.searchsorted(arc, arc + radius, side="right") - 1
+    after = np.clip(after, np.minimum(here + 1, last), last)
+    tangent = line[after] - line[before]
+    length = np.linalg.norm(tangent, axis=1, keepdims=True)
+    return np.divide(tangent, length, out=np.zeros_like(tangent), where=length > 0)
 
 
 def _colours(radius_um: np.ndarray, *, dark: bool) -> np.ndarray:

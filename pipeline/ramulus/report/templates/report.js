@@ -161,6 +161,8 @@ function painted(mesh, colour) {
   };
 }
 
+const distance = (a, b) => Math.hypot(a[0] - b[0], a[1] - b[1]);
+
 /* The picked vessel in the projections, an outline at its measured width over the grey values. */
 function cuts(graph, vessel, parent) {
   const images = graph.data.images, start = graph.first[vessel], n = graph.count[vessel];
@@ -195,15 +197,19 @@ function cuts(graph, vessel, parent) {
     pen.lineWidth = 2;
     const seen = line.reduce((sum, v, k) =>
       sum + (k ? Math.hypot(v[0] - line[k - 1][0], v[1] - line[k - 1][1]) : 0), 0);
-    if (seen < line[0][2]) {  // it runs along the line of sight
+    if (seen < 2 * line[0][2]) {  // it runs along the line of sight
       pen.beginPath();
       pen.arc(...px(line[n >> 1]), line[n >> 1][2] * scale, 0, 2 * Math.PI);
       pen.stroke();
     }
-    for (const sign of seen < line[0][2] ? [] : [1, -1]) {
+    for (const sign of seen < 2 * line[0][2] ? [] : [1, -1]) {
       pen.beginPath();
       line.forEach((v, k) => {
-        const a = line[Math.max(k - 1, 0)], b = line[Math.min(k + 1, n - 1)];
+        const [a, b] = [-1, 1].map((way) => {
+          let at = k;
+          do at += way; while (line[at + way] && distance(line[at], v) < v[2]);
+          return line[Math.min(Math.max(at, 0), n - 1)];
+        });
         const length = Math.hypot(b[0] - a[0], b[1] - a[1]) || 1;
         pen.lineTo(...px([v[0] - sign * v[2] * (b[1] - a[1]) / length,
           v[1] + sign * v[2] * (b[0] - a[0]) / length]));
