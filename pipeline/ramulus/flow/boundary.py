@@ -9,7 +9,13 @@ from .._settings import Settings, setting
 from ..errors import UnusableInputError
 from ..network.graph import NODE_KINDS, CentrelineGraph
 
-__all__ = ["OUTLET_RULES", "BoundaryConditions", "BoundarySettings", "boundary_conditions", "outlet_nodes"]
+__all__ = [
+    "OUTLET_RULES",
+    "BoundaryConditions",
+    "BoundarySettings",
+    "boundary_conditions",
+    "outlet_nodes",
+]
 
 OUTLET_RULES = ("all_ends", "border_ends")
 
@@ -81,7 +87,10 @@ def boundary_conditions(
     UnusableInputError
         If the pressures do not differ, or no outlet is left.
     """
-    if settings.inlet_flow_um3_per_s is None and settings.inlet_pressure_pa <= settings.outlet_pressure_pa:
+    if (
+        settings.inlet_flow_um3_per_s is None
+        and settings.inlet_pressure_pa <= settings.outlet_pressure_pa
+    ):
         msg = (
             f"boundary.inlet_pressure_pa: found {settings.inlet_pressure_pa} Pa, expected more than"
             f" outlet_pressure_pa = {settings.outlet_pressure_pa} Pa"
@@ -92,7 +101,9 @@ def boundary_conditions(
     if rule == "automatic":
         rule = "border_ends" if mesh else "all_ends"
     outlets = outlet_nodes(graph, inlets, rule)
-    why = f"{100 * loop_share:.0f} % of the length lies on loops: {'a mesh' if mesh else 'tree-like'}"
+    why = (
+        f"{100 * loop_share:.0f} % of the length lies on loops: {'a mesh' if mesh else 'tree-like'}"
+    )
     if not len(outlets) and settings.outlets == "automatic":
         rule = "all_ends"
         outlets = outlet_nodes(graph, inlets, rule)

@@ -2,7 +2,12 @@
 
 import numpy as np
 
-__all__ = ["effective_segments", "log_resistance_common", "log_resistance_sd", "monte_carlo_log_resistance"]
+__all__ = [
+    "effective_segments",
+    "log_resistance_common",
+    "log_resistance_sd",
+    "monte_carlo_log_resistance",
+]
 
 from ..network.graph import CentrelineGraph
 from .boundary import BoundaryConditions
@@ -31,7 +36,12 @@ def log_resistance_common(share: np.ndarray, relative_se: np.ndarray) -> float:
 
 
 def monte_carlo_log_resistance(
-    graph: CentrelineGraph, conditions: BoundaryConditions, *, relative_se: np.ndarray, draws: int, seed: int
+    graph: CentrelineGraph,
+    conditions: BoundaryConditions,
+    *,
+    relative_se: np.ndarray,
+    draws: int,
+    seed: int,
 ) -> np.ndarray:
     """(draws,) ln of the network's hindrance with lognormal radius errors, one factor a segment."""
     rng = np.random.default_rng(seed)
@@ -40,6 +50,8 @@ def monte_carlo_log_resistance(
     out = np.empty(draws)
     for k in range(draws):
         factor = np.exp(-4 * np.nan_to_num(relative_se) * rng.standard_normal(len(hindrance)))
-        solved = solve(graph, conditions, viscosity_mpa_s=unit, hindrance_per_um3=hindrance * factor)
+        solved = solve(
+            graph, conditions, viscosity_mpa_s=unit, hindrance_per_um3=hindrance * factor
+        )
         out[k] = np.log(solved.network_resistance_pa_s_per_m3)
     return out

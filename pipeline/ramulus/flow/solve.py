@@ -44,45 +44,67 @@ def solve(
 
     All inlets stand at one pressure and all outlets at another, so the network is a resistance
     between two terminals; a given inlet flow scales the pressures. Components that hold no inlet
-    or no outlet carry no flow and are reported.
+    or no outlet carry no flow and are reported. A segment without length makes one node of two: an
+    outlet that it joins to an inlet is none.
 
     Parameters
     ----------
+    graph : CentrelineGraph
+        The network.
+    conditions : BoundaryConditions
+        Where blood enters and leaves.
     viscosity_mpa_s : (m,) array
         Viscosity in each segment.
     hindrance_per_um3 : (m,) array, optional
-        In place of the integral over the graph's radii.
+        In place of the integral over the graph's radii; NaN takes a segment out.
+
+    Returns
+    -------
+    FlowSolution
+        Per node and per segment.
 
     Raises
     ------
     UnusableInputError
-        If no inlet is joined to an outlet, or a hindrance is not positive.
+        If no inlet is joined to an outlet, or a hindrance is below 0.
+
+    Examples
+    --------
+    Two alike in series, 1 per um3 and 1 mPa s each:
+
+    >>> line = [[0, 0, 0], [0, 0, 9], [0, 0, 18]]
+    >>> graph = CentrelineGraph.from_polylines(line, [[0, 1], [1, 2]], [line[:2], line[1:]])
+    >>> held = BoundaryConditions(np.array([0]), np.array([2]), 300.0, 100.0, None, "given", "")
+    >>> one = np.ones(2)
+    >>> solve(graph, held, viscosity_mpa_s=one, hindrance_per_um3=one).pressure_pa.tolist()
+    [300.0, 200.0, 100.0]
     """
     hindrance = segment_hindrance_per_um3(graph) if hindrance_per_um3 is None else hindrance_per_um3
     resistance = hindrance * 1e18 * viscosity_mpa_s * 1e-3
-    known = np.isfinite(resistance)
-    if (resistance[known] < 0).any():
-        msg = "hindrance_per_um3: found a value below 0, expected hindrances > 0"
+    if (resistance < 0).any():
+        msg = f"hindrance_per_um3: found {np.nanmin(hindrance):.4g}, expected hindrances >= 0"
         raise UnusableInputError(msg)
-    head = 1.0
-    pressure, flow, error = _two_terminal(graph, conditions.inlets, conditions.outlets, resistance, known, head)
-    total = _net_outflow(graph, flow, conditions.inlets)
+    pressure, flow, total, error = _two_terminal(graph, conditions, resistance)
     if not total > 0:
-        msg = "flow: no path joins the inlet to an outlet; choose root.* or boundary.outlets so that one does"
+        msg = (
+            "flow: no path joins the inlet to an outlet;"
+            " choose root.* or boundary.outlets so that one does"
+        )
         raise UnusableInputError(msg)
     drop = conditions.inlet_pressure_pa - conditions.outlet_pressure_pa
     if conditions.inlet_flow_um3_per_s is not None:
-        drop = conditions.inlet_flow_um3_per_s * 1e-18 * head / total
+        drop = conditions.inlet_flow_um3_per_s * 1e-18 / total
     # Flows came out in m3/s for a head of 1 Pa; um3/s from here on.
     with np.errstate(invalid="ignore"):
         across = pressure[graph.segment_nodes[:, 0]] - pressure[graph.segment_nodes[:, 1]]
-        share = np.where(flow == 0, 0.0, flow * across / (total * head))
+        share = np.where(flow == 0, 0.0, flow * across / total)
     return FlowSolution(
         pressure_pa=conditions.outlet_pressure_pa + pressure * drop,
-        flow_um3_per_s=flow * drop * 1e18, viscosity_mpa_s=np.asarray(viscosity_mpa_s, dtype=np.float64),
+        flow_um3_per_s=flow * drop * 1e18,
+        viscosity_mpa_s=np.asarray(viscosity_mpa_s, dtype=np.float64),
         hindrance_per_um3=hindrance, resistance_pa_s_per_m3=resistance, resistance_share=share,
         inlet_flow_um3_per_s=float(total * drop * 1e18),
-        network_resistance_pa_s_per_m3=float(head / total), mass_balance_error=error,
+        network_resistance_pa_s_per_m3=float(1 / total), mass_balance_error=error,
         unreached_segments=int(np.isnan(flow).sum()),
     )  # fmt: skip
 
@@ -93,79 +115,120 @@ def network_hindrance_per_um3(graph: CentrelineGraph, conditions: BoundaryCondit
     return solve(graph, conditions, viscosity_mpa_s=unit).network_resistance_pa_s_per_m3 / 1e15
 
 
-def _net_outflow(graph: CentrelineGraph, flow: np.ndarray, nodes: np.ndarray) -> float:
-    """Flow that leaves the given nodes into the network."""
-    marked = np.zeros(graph.n_nodes, bool)
-    marked[nodes] = True
-    known = np.nan_to_num(flow)
-    a, b = graph.segment_nodes.T
-    return float(np.sum(known * marked[a]) - np.sum(known * marked[b]))
-
-
-def _two_terminal(graph, inlets, outlets, resistance, known, head):  # noqa: ANN001, ANN202
-    """Pressures (head at the inlets, 0 at the outlets) and flows in the unit of head / resistance."""
+def _two_terminal(
+    graph: CentrelineGraph, conditions: BoundaryConditions, resistance: np.ndarray
+) -> tuple[np.ndarray, np.ndarray, float, float]:
+    """Return pressures (1 at the inlets, 0 at the outlets), flows, their sum and its error."""
     n = graph.n_nodes
     a, b = graph.segment_nodes.T
-    real = known & (a != b)
+    known = np.isfinite(resistance)
+    without = known & (resistance == 0) & (a != b)
     # Segments without resistance make one node of two.
-    zero = real & (resistance == 0)
-    _, merged = csgraph.connected_components(
-        sparse.coo_array((np.ones(zero.sum()), (a[zero], b[zero])), (n, n)), directed=False
-    )
-    size = int(merged.max()) + 1
-    wired = real & (merged[a] != merged[b])
+    merged, size = _parts(a[without], b[without], n)
+    wired = known & (merged[a] != merged[b])
     ma, mb = merged[a[wired]], merged[b[wired]]
     g = 1.0 / resistance[wired]
-    _, part = csgraph.connected_components(sparse.coo_array((g, (ma, mb)), (size, size)), directed=False)
-    source, sink = np.zeros(size, bool), np.zeros(size, bool)
-    source[merged[inlets]], sink[merged[outlets]] = True, True
-    has = [np.bincount(part, weights=mark, minlength=part.max() + 1) > 0 for mark in (source, sink)]
-    live = (has[0] & has[1])[part]
+    source, sink = np.zeros(size, dtype=bool), np.zeros(size, dtype=bool)
+    sink[merged[conditions.outlets]] = True
+    source[merged[conditions.inlets]] = True
+    sink &= ~source
+    live = _live(ma, mb, source, sink)
     pressure = np.full(size, np.nan)
-    pressure[source & live], pressure[sink & live] = head, 0.0
+    pressure[source & live], pressure[sink & live] = 1.0, 0.0
     unknown = live & ~source & ~sink
     if unknown.any():
-        pressure[unknown] = _interior(size, ma, mb, g, pressure, unknown)
+        pressure[unknown] = _interior(ma, mb, g, pressure, unknown)
     flow = np.full(graph.n_segments, np.nan)
     flow[wired] = g * (pressure[ma] - pressure[mb])
     flow[known & (a == b) & live[merged[a]]] = 0.0
-    node_pressure = pressure[merged]
-    net = np.bincount(ma, weights=np.nan_to_num(flow[wired]), minlength=size) - np.bincount(
-        mb, weights=np.nan_to_num(flow[wired]), minlength=size
-    )
+    net = _net(ma, mb, np.nan_to_num(flow[wired]), size)
     through = float(net[source & live].sum())
     error = float(np.abs(net[unknown]).max()) / through if unknown.any() and through > 0 else 0.0
-    return node_pressure, flow, error
+    inside = without & live[merged[a]]
+    if inside.any():
+        terminals = np.concatenate([conditions.inlets, conditions.outlets])
+        left = _net(a[wired], b[wired], np.nan_to_num(flow[wired]), n)
+        flow[inside] = _within(a[inside], b[inside], left, terminals, merged)
+    return pressure[merged], flow, through, error
 
 
-def _interior(size, a, b, g, pressure, unknown):  # noqa: ANN001, ANN202
-    number = np.full(size, -1)
+def _parts(a: np.ndarray, b: np.ndarray, n: int) -> tuple[np.ndarray, int]:
+    """Number the connected parts of n nodes."""
+    joined = sparse.coo_array((np.ones(len(a)), (a, b)), (n, n))
+    count, part = csgraph.connected_components(joined, directed=False)
+    return part, int(count)
+
+
+def _live(a: np.ndarray, b: np.ndarray, source: np.ndarray, sink: np.ndarray) -> np.ndarray:
+    """Tell which nodes lie in a part with an inlet and an outlet."""
+    part, count = _parts(a, b, len(source))
+    enters, leaves = (np.bincount(part[mark], minlength=count) > 0 for mark in (source, sink))
+    return np.asarray((enters & leaves)[part])
+
+
+def _net(a: np.ndarray, b: np.ndarray, flow: np.ndarray, n: int) -> np.ndarray:
+    """Flow that leaves each node."""
+    leaving = np.bincount(a, weights=flow, minlength=n) - np.bincount(b, weights=flow, minlength=n)
+    return np.asarray(leaving)
+
+
+def _within(
+    a: np.ndarray, b: np.ndarray, net: np.ndarray, terminals: np.ndarray, merged: np.ndarray
+) -> np.ndarray:
+    """Flows in segments without resistance, as the limit of small equal ones.
+
+    They bring what leaves the nodes at their ends; a terminal takes what is over, as does the first
+    node of a group without one, where nothing is.
+    """
+    nodes, ends = np.unique(np.concatenate([a, b]), return_inverse=True)
+    ia, ib = ends.reshape(2, -1)
+    held = np.isin(nodes, terminals)
+    group = merged[nodes]
+    has = np.isin(group, group[held])
+    _, first = np.unique(np.where(has, -1, group), return_index=True)
+    held[first[~has[first]]] = True
+    head = np.where(held, 0.0, np.nan)
+    if not held.all():
+        head[~held] = _interior(ia, ib, np.ones(len(ia)), head, ~held, leaving=net[nodes])
+    return np.asarray(head[ia] - head[ib])
+
+
+def _interior(
+    a: np.ndarray, b: np.ndarray, g: np.ndarray, pressure: np.ndarray, unknown: np.ndarray,
+    *, leaving: np.ndarray | None = None,
+) -> np.ndarray:  # fmt: skip
+    """Return the unknown pressures; `leaving` is what each node gives away otherwise."""
+    number = np.full(len(unknown), -1)
     number[unknown] = np.arange(unknown.sum())
     n = int(unknown.sum())
     ia, ib = number[a], number[b]
     diagonal = np.zeros(n)
     for i in (ia, ib):
         diagonal += np.bincount(i[i >= 0], weights=g[i >= 0], minlength=n)
-    right = np.zeros(n)
+    right = np.zeros(n) if leaving is None else -leaving[unknown]
     for i, other in ((ia, b), (ib, a)):
-        edge = (i >= 0) & ~unknown[other] & np.isfinite(pressure[other])
-        right += np.bincount(i[edge], weights=(g * np.nan_to_num(pressure[other]))[edge], minlength=n)
+        edge = (i >= 0) & ~unknown[other]
+        right += np.bincount(i[edge], weights=g[edge] * pressure[other[edge]], minlength=n)
     inner = (ia >= 0) & (ib >= 0)
     # Scaling by the diagonal takes the factor r**4 between wide and thin vessels out of the matrix.
     scale = 1.0 / np.sqrt(diagonal)
     value = -g[inner] * scale[ia[inner]] * scale[ib[inner]]
     rows = np.concatenate([ia[inner], ib[inner], np.arange(n)])
     columns = np.concatenate([ib[inner], ia[inner], np.arange(n)])
-    matrix = sparse.coo_array((np.concatenate([value, value, np.ones(n)]), (rows, columns)), (n, n)).tocsc()
+    entries = np.concatenate([value, value, np.ones(n)])
+    matrix = sparse.coo_array((entries, (rows, columns)), (n, n)).tocsc()
     matrix.indices, matrix.indptr = matrix.indices.astype(np.int32), matrix.indptr.astype(np.int32)
-    scaled = right * scale
-    if n <= _DIRECT_UP_TO:
+    return _solved(matrix, right * scale) * scale
+
+
+def _solved(matrix: sparse.csc_array, right: np.ndarray) -> np.ndarray:
+    if matrix.shape[0] <= _DIRECT_UP_TO:
         factor = linalg.splu(matrix, permc_spec="MMD_AT_PLUS_A", options={"SymmetricMode": True})
-        x = factor.solve(scaled)
+        x = factor.solve(right)
         for _ in range(2):
-            x += factor.solve(scaled - matrix @ x)
-        return x * scale
+            x += factor.solve(right - matrix @ x)
+        return np.asarray(x)
     import pyamg  # noqa: PLC0415 - heavy to import, and only for very large networks
 
-    x = pyamg.ruge_stuben_solver(matrix.tocsr()).solve(scaled, tol=1e-12, accel="cg", maxiter=200)
-    return x * scale
+    solver = pyamg.ruge_stuben_solver(matrix.tocsr())
+    return np.asarray(solver.solve(right, tol=1e-12, accel="cg", maxiter=200))

@@ -30,7 +30,9 @@ class ViscositySettings(Settings):
     hematocrit: float = setting(0.45, "discharge hematocrit", ge=0, lt=0.95)
 
 
-def viscosity_mpa_s(diameter_um: ArrayLike, *, settings: ViscositySettings, hematocrit: ArrayLike | None = None) -> np.ndarray:
+def viscosity_mpa_s(
+    diameter_um: ArrayLike, *, settings: ViscositySettings, hematocrit: ArrayLike | None = None
+) -> np.ndarray:
     """Return the viscosity in each vessel.
 
     Parameters
