@@ -77,7 +77,7 @@ def analyse_network(graph: CentrelineGraph, settings: "LineSettings", *, blur_um
     radii = segment_radii(graph)
     mesh = loop_share > settings.boundary.mesh_share
     order, topological, diameter, found = _orders(rooting, radii, length, settings, mesh)
-    junctions = find_junctions(graph, rooting, radii.mean_um, np.nan_to_num(radii.se_um))
+    junctions = find_junctions(graph, rooting, radii.mean_um, np.nan_to_num(radii.se_um), common_um=radii.common_um)
     pooled = summarise_junctions(junctions, settings=settings.junctions)
     graph = _with_kinds(graph, conditions, inlets)
     resistance = _resistance_table(graph, inlets, radii, settings)

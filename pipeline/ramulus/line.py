@@ -102,7 +102,7 @@ def analyse(
     tubes = step("enhance", enhance, fine, spacing_um=grid_um, settings=settings.enhance)
     area = None if region is None else finer_region(region, factors)
     found = step("segment", segment, tubes, settings=settings.segment, background=settings.background, region=area)
-    graph, edits = centrelines(found.mask, stack, settings, step)
+    graph, edits = centrelines(found.mask, stack, settings, step, Greys(fine, grid_um, found.background, found.background_level))
     gauged = step("gauge", gauge, graph, volume, spacing_um=stack.spacing_um, settings=settings.gauge)
     analysis = step("network", analyse_network, gauged.graph, settings, blur_um=gauged.blur.sigma_xy_um)
     facts = image_facts(stack, volume, found, tubes, gauged, factors)
@@ -139,14 +139,40 @@ def analyse_graph(graph: CentrelineGraph, settings: LineSettings, *, name: str, 
     return _results(None, analysis, None, [], {}, {}, {})
 
 
+@dataclass(frozen=True, slots=True)
+class Greys:
+    """Grey values on the working grid and the background on one of its levels."""
+
+    volume: np.ndarray
+    grid_um: tuple[float, float, float]
+    background: np.ndarray
+    level: int
+
+    def contrast_at(self, position_um: np.ndarray) -> np.ndarray:
+        """(k,) height of the grey values over the background at (k, 3) positions."""
+        from scipy.ndimage import map_coordinates  # noqa: PLC0415 - heavy to import
+
+        index = np.asarray(position_um) / np.asarray(self.grid_um)
+        coarse = (index + 0.5) * 0.5**self.level - 0.5
+        grey = map_coordinates(self.volume, index.T, output=np.float64, order=1, mode="nearest")
+        return grey - map_coordinates(self.background, coarse.T, output=np.float64, order=1, mode="nearest")
+
+
+def clean_with_greys(
+    graph: CentrelineGraph, greys: Greys | None, settings: CleanSettings
+) -> tuple[CentrelineGraph, list[dict[str, Any]]]:
+    """Clean a graph; the grey values, where given, decide on gaps and contacts too."""
+    return clean(graph, settings=settings, contrast_at=greys.contrast_at if greys else None)
+
+
 def centrelines(
-    mask: Mask, stack: Stack, settings: LineSettings, step: StepRunner
+    mask: Mask, stack: Stack, settings: LineSettings, step: StepRunner, greys: Greys | None = None
 ) -> tuple[CentrelineGraph, list[dict[str, Any]]]:
     """Thin, trace, clean and smooth."""
     skeleton: Skeleton = step("thin", thin, mask, settings=settings.thin)
     raw: CentrelineGraph = step("trace", trace, skeleton)
     raw = raw.replace(spacing_um=stack.spacing_um, extent_um=stack.size_um)
-    graph, edits = step("clean", clean, raw, settings=settings.clean)
+    graph, edits = step("clean", clean_with_greys, raw, greys, settings.clean)
     return step("smooth", smooth, graph, grid_um=mask.spacing_um, settings=settings.centreline), edits
 
 
@@ -190,15 +216,29 @@ def image_facts(
     noise = noise_sd(volume)
     top = volume.max()
     contrast = float(np.median(gauged.stations["contrast"][gauged.stations["good"]])) if gauged.stations["good"].any() else 0.0
-    reference = found.reference_contrast[:: factors[0]]
+    del factors
     return {
         "anisotropy": max(stack.spacing_um) / min(stack.spacing_um),
         "saturated_share": float(np.count_nonzero(volume == top)) / volume.size,
         "noise_sd": noise, "contrast": contrast,
         "contrast_to_noise": contrast / noise if noise > 0 else None,
-        "attenuation_ratio": float(reference.min() / reference.max()) if reference.max() > 0 else None,
+        "attenuation_ratio": attenuation_ratio(gauged.stations),
         **found.facts, **_gauge_facts(gauged),
     }  # fmt: skip
+
+
+def attenuation_ratio(stations: dict[str, np.ndarray]) -> float | None:
+    """Contrast of the dimmest fifth of the depth over that of the brightest, by fitted contrasts.
+
+    Fifths with fewer than ten fitted places are left out; None where fewer than two are left.
+    """
+    good = stations["good"]
+    z, contrast = stations["position_um"][good, 0], stations["contrast"][good]
+    if len(z) < 20 or np.ptp(z) == 0:
+        return None
+    fifth = np.minimum(((z - z.min()) / np.ptp(z) * 5).astype(int), 4)
+    medians = [float(np.median(contrast[fifth == k])) for k in range(5) if (fifth == k).sum() >= 10]
+    return min(medians) / max(medians) if len(medians) >= 2 and max(medians) > 0 else None
 
 
 def _gauge_facts(gauged: Gauged) -> dict[str, Any]:
