@@ -15,6 +15,7 @@ from line_fakes import CALLS, SHAPE, write_stack
 from scipy.ndimage import gaussian_filter
 
 from ramulus import UnusableInputError, WorkFailedError
+from ramulus._files import sha256_of
 from ramulus._folder import OWNED, is_finished
 from ramulus.config import load_configuration
 from ramulus.line import analyse, analyse_mask
@@ -42,8 +43,8 @@ def no_twin(graph, *, shape, facts, line, settings):
 
 
 def report(results, *, summary, flags, twin, title, settings, provenance):
-    del results, summary, twin, provenance
-    page = f"<h1>{title}</h1>{[flag.code for flag in flags]}<pre>{settings}</pre>"
+    del results, summary, twin
+    page = f"<h1>{title}</h1>{[flag.code for flag in flags]}<pre>{settings}</pre>{provenance}"
     return {"report.html": page.encode(), "figures/radii.png": b"png"}
 
 
@@ -124,7 +125,9 @@ def test_no_path_of_this_machine_is_in_any_file_but_the_record(stack, tmp_path):
     folder = run(stack, tmp_path / "out", f"input.region={region}")
     held = [name for name, text in contents(folder).items() if str(tmp_path).encode() in text]
     assert held == []
-    assert b'region = "region.ome.tif"' in (folder / "report.html").read_bytes()
+    page = (folder / "report.html").read_text()
+    assert 'region = "region.ome.tif"' in page
+    assert f"'SHA-256 of the input': '{sha256_of(stack)}'" in page
 
 
 # ---------------------------------------------------------------- taking up
