@@ -34,14 +34,27 @@ def murray_cost(
     flow_um3_per_s: np.ndarray, radius_um: np.ndarray, length_um: np.ndarray, viscosity_mpa_s: np.ndarray,
     *, settings: CostSettings,
 ) -> MurrayCost:  # fmt: skip
-    """Return 8 mu L Q**2 / (pi a**4) + K pi a**2 L of each segment, its least value and where it lies.
+    """Return 8 mu L Q**2 / (pi a**4) + K pi a**2 L of each segment, and where it would be least.
 
     The least lies at a**6 = 16 mu Q**2 / (pi**2 K) and is (3 pi / 2) K L a**2 (Murray 1926, PNAS
-    12:207). Segments without flow are left out.
+    12:207).
+
+    Parameters
+    ----------
+    flow_um3_per_s, radius_um, length_um, viscosity_mpa_s : (m,) arrays
+        Of each segment; those without flow or radius are left out.
+    settings : CostSettings
+        The metabolic constant K.
+
+    Returns
+    -------
+    MurrayCost
+        Per segment, NaN where it is left out; the excess over the least of all, NaN without flow.
 
     Examples
     --------
-    >>> cost = murray_cost(np.array([4.20749e7]), np.array([50.0]), np.array([500.0]), np.array([3.5]),
+    >>> flow, radius, length = np.array([4.20749e7]), np.array([50.0]), np.array([500.0])
+    >>> cost = murray_cost(flow, radius, length, np.array([3.5]),
     ...                    settings=CostSettings(metabolic_w_per_m3=642.857))
     >>> float(cost.optimal_radius_um[0].round(3)), float(f"{cost.cost_w[0]:.4g}")
     (50.0, 3.787e-09)
@@ -54,8 +67,9 @@ def murray_cost(
     volume = np.where(flows, np.pi * a**2 * length, np.nan)
     k = settings.metabolic_w_per_m3
     if k is None:
-        # The least cost goes with K**(2/3), so the ratio to it is smallest where K volume = 2 viscous.
-        k = 2 * float(np.nansum(viscous)) / max(float(np.nansum(volume)), 1e-300)
+        # The least cost goes with K**(2/3), so the ratio to it is least at K volume = 2 viscous.
+        whole = float(np.nansum(volume))
+        k = 2 * float(np.nansum(viscous)) / whole if whole > 0 else float("nan")
     best = (16 * mu * q**2 / (np.pi**2 * k)) ** (1 / 6)
     least = np.where(flows, 1.5 * np.pi * k * length * best**2, np.nan)
     cost = viscous + k * volume

@@ -1,6 +1,8 @@
 """Pressures and flows of the network, and the resistance between inlet and outlets."""
 
+from collections.abc import Callable
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 from scipy import sparse
@@ -133,15 +135,14 @@ def _two_terminal(
     source[merged[conditions.inlets]] = True
     sink &= ~source
     live = _live(ma, mb, source, sink)
-    pressure = np.full(size, np.nan)
-    pressure[source & live], pressure[sink & live] = 1.0, 0.0
+    fixed = np.where(source & live, 1.0, 0.0)
     unknown = live & ~source & ~sink
-    if unknown.any():
-        pressure[unknown] = _interior(ma, mb, g, pressure, unknown)
+    pressure, wired_flow = _balanced(ma, mb, g, fixed, unknown, np.zeros(size))
+    pressure[~live] = np.nan
     flow = np.full(graph.n_segments, np.nan)
-    flow[wired] = g * (pressure[ma] - pressure[mb])
+    flow[wired] = np.where(live[ma], wired_flow, np.nan)
     flow[known & (a == b) & live[merged[a]]] = 0.0
-    net = _net(ma, mb, np.nan_to_num(flow[wired]), size)
+    net = _net(ma, mb, wired_flow, size)
     through = float(net[source & live].sum())
     error = float(np.abs(net[unknown]).max()) / through if unknown.any() and through > 0 else 0.0
     inside = without & live[merged[a]]
@@ -153,7 +154,7 @@ def _two_terminal(
 
 
 def _parts(a: np.ndarray, b: np.ndarray, n: int) -> tuple[np.ndarray, int]:
-    """Number the connected parts of n nodes."""
+    """Return the number of the part that each of n nodes lies in, and how many there are."""
     joined = sparse.coo_array((np.ones(len(a)), (a, b)), (n, n))
     count, part = csgraph.connected_components(joined, directed=False)
     return part, int(count)
@@ -187,28 +188,40 @@ def _within(
     has = np.isin(group, group[held])
     _, first = np.unique(np.where(has, -1, group), return_index=True)
     held[first[~has[first]]] = True
-    head = np.where(held, 0.0, np.nan)
-    if not held.all():
-        head[~held] = _interior(ia, ib, np.ones(len(ia)), head, ~held, leaving=net[nodes])
-    return np.asarray(head[ia] - head[ib])
+    at_rest = np.zeros(len(nodes))
+    return _balanced(ia, ib, np.ones(len(ia)), at_rest, ~held, net[nodes])[1]
 
 
-def _interior(
-    a: np.ndarray, b: np.ndarray, g: np.ndarray, pressure: np.ndarray, unknown: np.ndarray,
-    *, leaving: np.ndarray | None = None,
-) -> np.ndarray:  # fmt: skip
-    """Return the unknown pressures; `leaving` is what each node gives away otherwise."""
+def _balanced(
+    a: np.ndarray, b: np.ndarray, g: np.ndarray, fixed: np.ndarray, unknown: np.ndarray,
+    leaving: np.ndarray,
+) -> tuple[np.ndarray, np.ndarray]:  # fmt: skip
+    """Pressures and flows that balance at the unknown nodes, `leaving` being given away there.
+
+    What a solve leaves over is solved for again and added to the flows themselves: the difference
+    of two pressures cannot hold the flow through a short wide vessel between thin ones.
+    """
+    pressure, flow = fixed.copy(), g * (fixed[a] - fixed[b])
+    if not unknown.any():
+        return pressure, flow
+    answer = _laplacian(a, b, g, unknown)
+    for _ in range(3):
+        change = np.zeros(len(fixed))
+        change[unknown] = answer(-(leaving + _net(a, b, flow, len(fixed)))[unknown])
+        pressure += change
+        flow += g * (change[a] - change[b])
+    return pressure, flow
+
+
+def _laplacian(
+    a: np.ndarray, b: np.ndarray, g: np.ndarray, unknown: np.ndarray
+) -> Callable[[np.ndarray], np.ndarray]:
+    """Return the function that solves the network's Laplacian at the unknown nodes."""
     number = np.full(len(unknown), -1)
     number[unknown] = np.arange(unknown.sum())
     n = int(unknown.sum())
     ia, ib = number[a], number[b]
-    diagonal = np.zeros(n)
-    for i in (ia, ib):
-        diagonal += np.bincount(i[i >= 0], weights=g[i >= 0], minlength=n)
-    right = np.zeros(n) if leaving is None else -leaving[unknown]
-    for i, other in ((ia, b), (ib, a)):
-        edge = (i >= 0) & ~unknown[other]
-        right += np.bincount(i[edge], weights=g[edge] * pressure[other[edge]], minlength=n)
+    diagonal = sum(np.bincount(i[i >= 0], weights=g[i >= 0], minlength=n) for i in (ia, ib))
     inner = (ia >= 0) & (ib >= 0)
     # Scaling by the diagonal takes the factor r**4 between wide and thin vessels out of the matrix.
     scale = 1.0 / np.sqrt(diagonal)
@@ -218,17 +231,15 @@ def _interior(
     entries = np.concatenate([value, value, np.ones(n)])
     matrix = sparse.coo_array((entries, (rows, columns)), (n, n)).tocsc()
     matrix.indices, matrix.indptr = matrix.indices.astype(np.int32), matrix.indptr.astype(np.int32)
-    return _solved(matrix, right * scale) * scale
+    solver = _solver(matrix)
+    return lambda right: np.asarray(solver(right * scale) * scale)
 
 
-def _solved(matrix: sparse.csc_array, right: np.ndarray) -> np.ndarray:
+def _solver(matrix: sparse.csc_array) -> Callable[[np.ndarray], Any]:
     if matrix.shape[0] <= _DIRECT_UP_TO:
         factor = linalg.splu(matrix, permc_spec="MMD_AT_PLUS_A", options={"SymmetricMode": True})
-        x = factor.solve(right)
-        for _ in range(2):
-            x += factor.solve(right - matrix @ x)
-        return np.asarray(x)
+        return factor.solve
     import pyamg  # noqa: PLC0415 - heavy to import, and only for very large networks
 
-    solver = pyamg.ruge_stuben_solver(matrix.tocsr())
-    return np.asarray(solver.solve(right, tol=1e-12, accel="cg", maxiter=200))
+    levels = pyamg.ruge_stuben_solver(matrix.tocsr())
+    return lambda right: levels.solve(right, tol=1e-9, accel="cg", maxiter=200)
