@@ -237,7 +237,11 @@ def _laplacian(
 
 def _solver(matrix: sparse.csc_array) -> Callable[[np.ndarray], Any]:
     if matrix.shape[0] <= _DIRECT_UP_TO:
-        factor = linalg.splu(matrix, permc_spec="MMD_AT_PLUS_A", options={"SymmetricMode": True})
+        # The matrix is positive definite: pivots off the diagonal would only fill it up.
+        factor = linalg.splu(
+            matrix, permc_spec="MMD_AT_PLUS_A", diag_pivot_thresh=0.0,
+            options={"SymmetricMode": True},
+        )  # fmt: skip
         return factor.solve
     import pyamg  # noqa: PLC0415 - heavy to import, and only for very large networks
 
