@@ -1,5 +1,10 @@
 """TIFF stacks: multi-page, BigTIFF, ImageJ and OME-TIFF with their spacing and unit."""
 
+import logging
+import re
+import threading
+from collections.abc import Iterator
+from contextlib import contextmanager
 from pathlib import Path
 from typing import Any
 from xml.etree import ElementTree
@@ -25,21 +30,51 @@ def read_tiff(path: Path) -> RawImage:
         If the file is no complete TIFF, a colour photograph, or its axes cannot be told.
     """
     try:
-        with tifffile.TiffFile(path) as file:
-            return _described(path, file)
+        with _damage() as found, tifffile.TiffFile(path) as file:
+            raw = _described(path, file)
     except UnusableInputError:
         raise
     except Exception as broken:
         msg = f"{path.name}: not a readable TIFF ({type(broken).__name__}: {_short(broken)}); expected a complete file"
         raise UnusableInputError(msg) from broken
+    if found:
+        msg = f"{path.name}: the file is damaged or cut short ({_short(found[0])})"
+        raise UnusableInputError(msg)
+    return raw
+
+
+@contextmanager
+def _damage() -> Iterator[list[str]]:
+    """Collect what tifffile finds broken: it logs that, and goes on with the part that is left."""
+    found: list[str] = []
+    thread = threading.get_ident()
+
+    class Listener(logging.Handler):
+        def emit(self, record: logging.LogRecord) -> None:
+            text = record.getMessage()
+            tag = re.search(r"TiffTag (\d+)", text)
+            # Private tags (from 32768 on) hold nothing that is needed here.
+            if record.thread == thread and not (tag and int(tag[1]) >= 32768):
+                found.append(text)
+
+    listener = Listener(level=logging.ERROR)
+    logger = logging.getLogger("tifffile")
+    logger.addHandler(listener)
+    try:
+        yield found
+    finally:
+        logger.removeHandler(listener)
 
 
 def _described(path: Path, file: tifffile.TiffFile) -> RawImage:
     series = file.series[0]
     axes, shape = series.axes, series.shape
-    page = file.pages[0]
-    if page.photometric == tifffile.PHOTOMETRIC.RGB or page.photometric == tifffile.PHOTOMETRIC.PALETTE:
-        msg = f"{path.name}: a colour image ({page.photometric.name}, {shape}), expected grey values; export one channel"
+    page: Any = file.pages[0]
+    if page.photometric in (tifffile.PHOTOMETRIC.RGB, tifffile.PHOTOMETRIC.PALETTE):
+        msg = (
+            f"{path.name}: a colour image ({page.photometric.name}, {shape}), expected grey values;"
+            f" export one channel"
+        )
         raise UnusableInputError(msg)
     if np.dtype(series.dtype).kind not in "uif":
         msg = f"{path.name}: found dtype {series.dtype}, expected integers or floats"
@@ -105,8 +140,8 @@ def _read(path: Path, axes: str, z_axis: str, channel: int, time_point: int) -> 
         msg = f"{path.name}: the pixels cannot be read ({type(broken).__name__}: {_short(broken)}); is the file complete?"
         raise UnusableInputError(msg) from broken
     order = [rest.index(a) for a in (z_axis, "Y", "X") if a]
-    data = np.transpose(data, order)
-    return data if data.ndim == 3 else data[None]
+    planes: np.ndarray = np.transpose(data, order)
+    return planes if planes.ndim == 3 else planes[None]
 
 
 def _check_length(path: Path, file: tifffile.TiffFile, series: Any) -> None:
