@@ -75,7 +75,7 @@ def test_two_sources_that_contradict_one_another_are_refused():
 
 
 def test_a_user_who_contradicts_the_header_must_say_why():
-    with pytest.raises(SpacingError, match="input.spacing_override_reason"):
+    with pytest.raises(SpacingError, match=r"input\.spacing_override_reason"):
         combined(header(5, 1, 1), (5, 1, 2))
     spacing, origin = combined(header(5, 1, 1), (5, 1, 2), override="wrong objective noted")
     assert spacing == (5.0, 1.0, 2.0)

@@ -26,7 +26,7 @@ def read_nifti(path: Path) -> RawImage:
     import nibabel  # noqa: PLC0415 - heavy to import
 
     try:
-        image = nibabel.load(path)
+        image: Any = nibabel.load(path)
         header: Any = image.header
         shape = tuple(int(n) for n in image.shape)
         affine = np.asarray(image.affine, dtype=float)
@@ -49,13 +49,13 @@ def read_nifti(path: Path) -> RawImage:
         found[axis] = [
             AxisSpacing(float(columns[k]), unit, "the affine"), AxisSpacing(zooms[k], unit, "pixdim")
         ]  # fmt: skip
-    slope, inter = header.get_slope_inter()
-    scaled = not (slope in (None, 1.0) and inter in (None, 0.0))
+    # nibabel takes the scaling out of the header when it loads a file; its array keeps it.
+    scaled = (float(image.dataobj.slope), float(image.dataobj.inter)) != (1.0, 0.0)
 
     def read(channel: int, time_point: int) -> np.ndarray:  # noqa: ARG001
         try:
             where = (slice(None),) * 3 + ((channel,) if len(shape) == 4 else ())
-            proxy: Any = image.dataobj
+            proxy = image.dataobj
             data = np.asarray(proxy[where] if scaled else proxy.get_unscaled()[where])
         except Exception as broken:
             text = " ".join(str(broken).split())[:120]
@@ -65,7 +65,9 @@ def read_nifti(path: Path) -> RawImage:
         data = data.astype(np.float32) if data.dtype == np.float64 else data
         return np.ascontiguousarray(data.astype(data.dtype.newbyteorder("=")))
 
-    oblique = not np.allclose(np.sort(np.abs(affine[:3, :3] / np.maximum(columns, 1e-12)), axis=0)[:2], 0, atol=1e-3)
+    oblique = not np.allclose(
+        np.sort(np.abs(affine[:3, :3] / np.maximum(columns, 1e-12)), axis=0)[:2], 0, atol=1e-3
+    )
     return RawImage(
         (shape[2], shape[1], shape[0]), "float32" if scaled else str(dtype), found, read, "NIfTI",
         tuple(str(k) for k in range(shape[3])) if len(shape) == 4 else ("0",),

@@ -16,7 +16,14 @@ from .spacing import combined_spacing
 from .stack import Provenance, Stack
 from .tiff import read_tiff
 
-__all__ = ["InputSettings", "StackReport", "checked_grey_values", "describe", "file_sha256", "open_stack"]
+__all__ = [
+    "InputSettings",
+    "StackReport",
+    "checked_grey_values",
+    "describe",
+    "file_sha256",
+    "open_stack",
+]
 
 
 class InputSettings(Settings):
@@ -34,8 +41,12 @@ class InputSettings(Settings):
     )
     channel: str = setting("", "name or number of the channel, where there are several")
     time_point: int = setting(0, "number of the time point", ge=0)
-    polarity: Literal["bright", "dark"] = setting("bright", "vessels brighter or darker than the tissue")
-    region: str = setting("", "file of a region-of-interest mask on the same grid; empty: everywhere")
+    polarity: Literal["bright", "dark"] = setting(
+        "bright", "vessels brighter or darker than the tissue"
+    )
+    region: str = setting(
+        "", "file of a region-of-interest mask on the same grid; empty: everywhere"
+    )
     graph_unit: Literal["um", "mm"] = setting("um", "unit of an SWC file's numbers")
 
 
@@ -66,7 +77,10 @@ def open_stack(path: Path | str, *, settings: InputSettings, name: str = "") -> 
     path = Path(path)
     raw = _raw(path)
     spacing, origin = combined_spacing(
-        raw.found, user_um=settings.spacing_um, name=path.name, override=settings.spacing_override_reason
+        raw.found,
+        user_um=settings.spacing_um,
+        name=path.name,
+        override=settings.spacing_override_reason,
     )
     channel = _channel(raw, settings, path.name)
     if settings.time_point >= raw.time_points:
@@ -88,7 +102,10 @@ def describe(path: Path | str, *, settings: InputSettings) -> StackReport:
     spacing, origin = None, None
     try:
         spacing, origin = combined_spacing(
-            raw.found, user_um=settings.spacing_um, name=path.name, override=settings.spacing_override_reason
+            raw.found,
+            user_um=settings.spacing_um,
+            name=path.name,
+            override=settings.spacing_override_reason,
         )
     except SpacingError as absent:
         problems.append(str(absent))
@@ -97,9 +114,13 @@ def describe(path: Path | str, *, settings: InputSettings) -> StackReport:
     except UnusableInputError as unclear:
         problems.append(str(unclear))
     if min(raw.shape) < 4:
-        problems.append(f"{path.name}: {raw.shape} voxels; fewer than 4 along an axis is no stack to trace")
+        problems.append(
+            f"{path.name}: {raw.shape} voxels; fewer than 4 along an axis is no stack to trace"
+        )
     if spacing and max(spacing) > 5.5 * min(spacing):
-        problems.append(f"{path.name}: voxels are {max(spacing) / min(spacing):.2g} times coarser along one axis")
+        problems.append(
+            f"{path.name}: voxels are {max(spacing) / min(spacing):.2g} times coarser along one axis"
+        )
     return StackReport(
         str(path), raw.format, raw.shape, raw.dtype, spacing, origin, raw.channels, raw.time_points,
         raw.header, tuple(problems),
@@ -179,7 +200,9 @@ def _read_npy(path: Path) -> RawImage:
         msg = f"{path.name}: not a readable .npy array ({' '.join(str(broken).split())[:120]})"
         raise UnusableInputError(msg) from broken
     if data.ndim != 3 or data.size == 0 or data.dtype.kind not in "uifb":
-        msg = f"{path.name}: found shape {data.shape} of {data.dtype}, expected (z, y, x) of numbers"
+        msg = (
+            f"{path.name}: found shape {data.shape} of {data.dtype}, expected (z, y, x) of numbers"
+        )
         raise UnusableInputError(msg)
     z, y, x = data.shape
     return RawImage((z, y, x), str(data.dtype), {}, lambda channel, time_point: data, "npy")  # noqa: ARG005

@@ -22,8 +22,10 @@ class SliceVolume:
     def __getitem__(self, key: object) -> np.ndarray:
         """Read the planes asked for and index them."""
         keys = key if isinstance(key, tuple) else (key,)
-        if keys and keys[0] is Ellipsis:
-            keys = (slice(None), *keys[1:])
+        if Ellipsis in keys:
+            at = keys.index(Ellipsis)
+            keys = (*keys[:at], *[slice(None)] * (self.ndim + 1 - len(keys)), *keys[at + 1 :])
+        keys = keys or (slice(None),)
         planes = np.arange(self.shape[0])[keys[0]]
         if np.ndim(planes) == 0:
             return self._plane(int(planes))[keys[1:]]
@@ -43,7 +45,9 @@ class SliceVolume:
 def slice_files(folder: Path) -> list[Path]:
     """Return the folder's TIFF files in the natural order of their names."""
     files = [f for f in folder.iterdir() if f.suffix.lower() in (".tif", ".tiff") and f.is_file()]
-    return sorted(files, key=lambda f: [int(t) if t.isdigit() else t for t in re.split(r"(\d+)", f.name)])
+    return sorted(
+        files, key=lambda f: [int(t) if t.isdigit() else t for t in re.split(r"(\d+)", f.name)]
+    )
 
 
 def read_slices(folder: Path) -> RawImage:

@@ -50,7 +50,8 @@ def combined_spacing(
     SpacingError
         If an axis has none, it is impossible, or two sources differ by more than 1 %.
     """
-    values, origins = [], []
+    values: list[float] = []
+    origins: list[SpacingOrigin] = []
     for axis, given in zip("zyx", user_um or (None, None, None), strict=True):
         stated = [(s, s.um()) for s in found.get(axis, [])]
         known = [(s, um) for s, um in stated if um is not None and isfinite(um) and um > 0]

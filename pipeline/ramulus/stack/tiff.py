@@ -99,7 +99,9 @@ def _described(path: Path, file: tifffile.TiffFile) -> RawImage:
     problems = []
     if depth == 1 and (n_channels > 4 or n_times > 1):
         swapped = "C" if n_channels > 4 else "T"
-        problems.append(f"one plane but {sizes[swapped]} along {swapped}: were the axes swapped when it was saved?")
+        problems.append(
+            f"one plane but {sizes[swapped]} along {swapped}: were the axes swapped when it was saved?"
+        )
     if not channels or len(channels) != n_channels:
         channels = [str(k) for k in range(n_channels)]
     full = "".join(axes)
@@ -195,13 +197,19 @@ def _imagej(metadata: dict[str, Any], page: Any, found: Found) -> None:
     unit = "" if unit.lower() in ("pixel", "pixels") else unit
     spacing = metadata.get("spacing")
     if spacing is not None:
-        found.setdefault("z", []).append(AxisSpacing(_number(spacing), str(metadata.get("zunit", unit)), "the ImageJ description"))
+        found.setdefault("z", []).append(
+            AxisSpacing(
+                _number(spacing), str(metadata.get("zunit", unit)), "the ImageJ description"
+            )
+        )
     for axis, tag in (("y", "YResolution"), ("x", "XResolution")):
         if tag in page.tags:
             top, bottom = page.tags[tag].value
             if top:
                 per_axis = str(metadata.get(f"{axis}unit", unit)).replace("\\u00B5", "u")
-                found.setdefault(axis, []).append(AxisSpacing(bottom / top, per_axis, f"the tag {tag}"))
+                found.setdefault(axis, []).append(
+                    AxisSpacing(bottom / top, per_axis, f"the tag {tag}")
+                )
 
 
 def _number(value: Any) -> float:
@@ -211,5 +219,5 @@ def _number(value: Any) -> float:
         return float("nan")
 
 
-def _short(error: BaseException) -> str:
+def _short(error: BaseException | str) -> str:
     return " ".join(str(error).split())[:120]
