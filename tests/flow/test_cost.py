@@ -22,7 +22,7 @@ def cost(flow, radius, length, *, mu=3.5, settings=K):
 def test_the_worked_example():
     # 3.5 mPa s and a shear stress of 1.5 Pa give K = 642.857 W/m3; a = 50 um carries
     # 4.20749e7 um3/s, and 500 um cost 3.78674e-9 W (derived).
-    assert 1.5**2 / 3.5e-3 == pytest.approx(642.857, abs=1e-3)
+    assert pytest.approx(642.857, abs=1e-3) == 1.5**2 / 3.5e-3
     found = cost(4.20749e7, 50, 500)
     assert found.optimal_radius_um[0] == pytest.approx(50, rel=1e-5)
     assert found.cost_w[0] == pytest.approx(3.78674e-9, rel=1e-5)

@@ -1,4 +1,4 @@
-"""Where blood enters and leaves, and at which pressure: the conditions that the flow is solved under."""
+"""Where blood enters and leaves, and at which pressure: what the flow is solved under."""
 
 from dataclasses import dataclass
 from typing import Any, Literal
@@ -25,12 +25,13 @@ class BoundarySettings(Settings):
 
     outlets: Literal["automatic", "all_ends", "border_ends"] = setting(
         "automatic",
-        "which ends are outlets: every free end but the inlet (all_ends) or those the volume's edge cuts"
+        "which ends are outlets: every free end but the inlet (all_ends) or those the volume's"
+        " edge cuts"
         " (border_ends); automatic takes all_ends in a tree-like network, border_ends in a mesh",
     )
     mesh_share: float = setting(
-        0.2, "share of the length that lies on loops from which a network counts as a mesh", gt=0, lt=1,
-        source="data contract",
+        0.2, "share of the length that lies on loops from which a network counts as a mesh",
+        gt=0, lt=1, source="data contract",
     )  # fmt: skip
     inlet_pressure_pa: float = setting(
         5000.0, "pressure at the inlet", unit="Pa", source="judgement: about 37 mmHg, arteriolar"
@@ -85,7 +86,7 @@ def boundary_conditions(
     Raises
     ------
     UnusableInputError
-        If the pressures do not differ, or no outlet is left.
+        If the inlet's pressure does not exceed the outlets'.
     """
     if (
         settings.inlet_flow_um3_per_s is None
@@ -110,7 +111,8 @@ def boundary_conditions(
         why += "; no end is cut by the volume's edge, so every free end is an outlet"
     text = {
         "all_ends": "every free end but the inlet is an outlet at one pressure",
-        "border_ends": "ends cut by the volume's edge, but the inlet, are outlets at one pressure; blind"
+        "border_ends": "ends cut by the volume's edge, but the inlet, are outlets at one"
+        " pressure; blind"
         " ends carry no flow",
     }[rule]
     return BoundaryConditions(

@@ -13,8 +13,8 @@ class CostSettings(Settings):
     """Settings of Murray's cost."""
 
     metabolic_w_per_m3: float | None = setting(
-        None, "power that a volume of blood costs; absent: the value under which this network's whole"
-        " cost is least above its optimum, so that the excess speaks of the radii alone",
+        None, "power that a volume of blood costs; absent: the value under which this network's"
+        " whole cost is least above its optimum, so that the excess speaks of the radii alone",
         unit="W/m3", gt=0, source="Murray 1926, PNAS 12:207",
     )  # fmt: skip
 
@@ -31,8 +31,8 @@ class MurrayCost:
 
 
 def murray_cost(
-    flow_um3_per_s: np.ndarray, radius_um: np.ndarray, length_um: np.ndarray, viscosity_mpa_s: np.ndarray,
-    *, settings: CostSettings,
+    flow_um3_per_s: np.ndarray, radius_um: np.ndarray, length_um: np.ndarray,
+    viscosity_mpa_s: np.ndarray, *, settings: CostSettings,
 ) -> MurrayCost:  # fmt: skip
     """Return 8 mu L Q**2 / (pi a**4) + K pi a**2 L of each segment, and where it would be least.
 

@@ -1,4 +1,4 @@
-"""Hydraulic hindrance of a vessel: the integral of (8 / pi) ds / r**4 along its measured profile."""
+"""Hydraulic hindrance of a vessel: the integral of (8 / pi) ds / r**4 along its profile."""
 
 import numpy as np
 from numpy.typing import ArrayLike
@@ -15,8 +15,8 @@ __all__ = [
 def hindrance_per_um3(arc_um: ArrayLike, radius_um: ArrayLike) -> float:
     """Integrate the Hagen-Poiseuille hindrance, (8 / pi) ds / r**4, along one vessel.
 
-    Laminar, developed flow, circular lumen (Sutera & Skalak 1993, Annu Rev Fluid Mech 25:1-19). Exact
-    for cones, so coarse points cost nothing.
+    Laminar, developed flow, circular lumen (Sutera & Skalak 1993, Annu Rev Fluid Mech 25:1-19).
+    Exact for cones, so coarse points cost nothing.
 
     Parameters
     ----------
@@ -43,7 +43,10 @@ def hindrance_per_um3(arc_um: ArrayLike, radius_um: ArrayLike) -> float:
     arc = np.asarray(arc_um, dtype=np.float64)
     radius = np.asarray(radius_um, dtype=np.float64)
     if arc.ndim != 1 or len(arc) < 2 or arc.shape != radius.shape:
-        msg = f"arc_um, radius_um: found shapes {arc.shape}, {radius.shape}, expected two of (n,), n >= 2"
+        msg = (
+            f"arc_um, radius_um: found shapes {arc.shape}, {radius.shape}, expected two of (n,), n"
+            " >= 2"
+        )
         raise UnusableInputError(msg)
     if not (np.diff(arc) > 0).all():
         msg = "arc_um: found a step that is not > 0 um, expected strictly increasing arc lengths"

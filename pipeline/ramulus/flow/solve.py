@@ -22,8 +22,8 @@ _DIRECT_UP_TO = 200_000
 class FlowSolution:
     """Pressures, flows and what follows from them.
 
-    Flow is positive from `segment_nodes[:, 0]` to `[:, 1]`. Nodes that no path joins to an inlet and
-    an outlet have NaN pressure, their segments NaN flow.
+    Flow is positive from `segment_nodes[:, 0]` to `[:, 1]`. Nodes that no path joins to an inlet
+    and an outlet have NaN pressure, their segments NaN flow.
     """
 
     pressure_pa: np.ndarray

@@ -16,8 +16,10 @@ class ViscositySettings(Settings):
     """Settings of the viscosity."""
 
     law: Literal["constant", "pries_1992", "pries_1994"] = setting(
-        "constant", "constant; in vitro (pries_1992) or in vivo (pries_1994) by diameter and hematocrit",
-        source="Pries, Neuhaus, Gaehtgens 1992, Am J Physiol 263:H1770; Pries et al. 1994, Circ Res 75:904",
+        "constant",
+        "constant; in vitro (pries_1992) or in vivo (pries_1994) by diameter and hematocrit",
+        source="Pries, Neuhaus, Gaehtgens 1992, Am J Physiol 263:H1770; Pries et al. 1994, Circ Res"
+        " 75:904",
     )  # fmt: skip
     constant_mpa_s: float = setting(
         3.5, "viscosity of blood where the law is constant", unit="mPa s", gt=0,

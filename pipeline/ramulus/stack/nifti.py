@@ -39,7 +39,10 @@ def read_nifti(path: Path) -> RawImage:
         raise UnusableInputError(msg) from broken
     shape = shape[:3] + tuple(n for n in shape[3:] if n > 1)
     if len(shape) not in (3, 4) or min(shape) < 1 or dtype.kind not in "uif":
-        msg = f"{path.name}: found shape {shape} of {dtype}, expected x, y, z of numbers (and perhaps channels)"
+        msg = (
+            f"{path.name}: found shape {shape} of {dtype}, expected x, y, z of numbers (and"
+            " perhaps channels)"
+        )
         raise UnusableInputError(msg)
     _check_length(path, shape, dtype, int(header["vox_offset"]))
     unit = {"meter": "m", "mm": "mm", "micron": "um"}.get(space_unit, "")
@@ -47,7 +50,8 @@ def read_nifti(path: Path) -> RawImage:
     found: Found = {}
     for k, axis in enumerate("xyz"):
         found[axis] = [
-            AxisSpacing(float(columns[k]), unit, "the affine"), AxisSpacing(zooms[k], unit, "pixdim")
+            AxisSpacing(float(columns[k]), unit, "the affine"),
+            AxisSpacing(zooms[k], unit, "pixdim"),
         ]  # fmt: skip
     # nibabel takes the scaling out of the header when it loads a file; its array keeps it.
     scaled = (float(image.dataobj.slope), float(image.dataobj.inter)) != (1.0, 0.0)
@@ -59,7 +63,10 @@ def read_nifti(path: Path) -> RawImage:
             data = np.asarray(proxy[where] if scaled else proxy.get_unscaled()[where])
         except Exception as broken:
             text = " ".join(str(broken).split())[:120]
-            msg = f"{path.name}: the voxels cannot be read ({type(broken).__name__}: {text}); is the file complete?"
+            msg = (
+                f"{path.name}: the voxels cannot be read ({type(broken).__name__}: {text}); is the"
+                " file complete?"
+            )
             raise UnusableInputError(msg) from broken
         data = data.reshape(shape[:3]).transpose(2, 1, 0)
         data = data.astype(np.float32) if data.dtype == np.float64 else data
@@ -80,9 +87,15 @@ def _check_length(path: Path, shape: tuple[int, ...], dtype: np.dtype, offset: i
     size = path.stat().st_size
     if path.suffix == ".gz":
         if needed > 1100 * size:
-            msg = f"{path.name}: the header promises {needed} bytes from a file of {size}; refused as impossible"
+            msg = (
+                f"{path.name}: the header promises {needed} bytes from a file of {size}; refused"
+                " as impossible"
+            )
             raise UnusableInputError(msg)
         return
     if needed > size:
-        msg = f"{path.name}: the header promises {needed} bytes, the file holds {size}; it is cut short"
+        msg = (
+            f"{path.name}: the header promises {needed} bytes, the file holds {size}; it is cut"
+            " short"
+        )
         raise UnusableInputError(msg)

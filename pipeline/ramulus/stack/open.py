@@ -119,7 +119,8 @@ def describe(path: Path | str, *, settings: InputSettings) -> StackReport:
         )
     if spacing and max(spacing) > 5.5 * min(spacing):
         problems.append(
-            f"{path.name}: voxels are {max(spacing) / min(spacing):.2g} times coarser along one axis"
+            f"{path.name}: voxels are {max(spacing) / min(spacing):.2g} times coarser along one"
+            " axis"
         )
     return StackReport(
         str(path), raw.format, raw.shape, raw.dtype, spacing, origin, raw.channels, raw.time_points,
@@ -139,7 +140,10 @@ def checked_grey_values(volume: np.ndarray, *, name: str) -> np.ndarray:
         bad = ~np.isfinite(volume)
         if bad.any():
             first = tuple(int(i) for i in np.argwhere(bad)[0])
-            msg = f"{name}: {int(bad.sum())} voxels are not finite, the first at (z, y, x) = {first}; mend or mask them"
+            msg = (
+                f"{name}: {int(bad.sum())} voxels are not finite, the first at (z, y, x) ="
+                f" {first}; mend or mask them"
+            )
             raise UnusableInputError(msg)
     low, high = volume.min(), volume.max()
     if low == high:
@@ -189,7 +193,10 @@ def _raw(path: Path) -> RawImage:
     except OSError as broken:
         msg = f"{path.name}: cannot be read ({broken.strerror or broken})"
         raise UnusableInputError(msg) from broken
-    msg = f"{path.name}: no reader for this ending; expected TIFF, a folder of TIFF slices, NIfTI or .npy"
+    msg = (
+        f"{path.name}: no reader for this ending; expected TIFF, a folder of TIFF slices, NIfTI or"
+        " .npy"
+    )
     raise UnusableInputError(msg)
 
 
@@ -211,7 +218,10 @@ def _read_npy(path: Path) -> RawImage:
 def _channel(raw: RawImage, settings: InputSettings, name: str) -> int:
     if not settings.channel:
         if len(raw.channels) > 1:
-            msg = f"{name}: {len(raw.channels)} channels ({', '.join(raw.channels)}); choose one with --set input.channel=..."
+            msg = (
+                f"{name}: {len(raw.channels)} channels ({', '.join(raw.channels)}); choose one"
+                " with --set input.channel=..."
+            )
             raise UnusableInputError(msg)
         return 0
     if settings.channel in raw.channels:

@@ -12,8 +12,8 @@ __all__ = ["RawImage"]
 class RawImage:
     """An image as a header describes it.
 
-    `read(channel, time_point)` returns the (z, y, x) array, lazy where the format allows. Shapes are
-    z, y, x.
+    `read(channel, time_point)` returns the (z, y, x) array, lazy where the format allows. Shapes
+    are z, y, x.
     """
 
     shape: tuple[int, int, int]

@@ -35,7 +35,8 @@ class SliceVolume:
         plane = read_tiff(self.files[z]).read(0, 0)[0]
         if plane.shape != self.shape[1:] or plane.dtype != self.dtype:
             msg = (
-                f"{self.files[z].name}: a plane of {plane.shape} {plane.dtype}, expected {self.shape[1:]}"
+                f"{self.files[z].name}: a plane of {plane.shape} {plane.dtype}, expected"
+                f" {self.shape[1:]}"
                 f" {self.dtype} as the first"
             )
             raise UnusableInputError(msg)
@@ -51,14 +52,17 @@ def slice_files(folder: Path) -> list[Path]:
 
 
 def read_slices(folder: Path) -> RawImage:
-    """Return what a folder of slices holds; gaps in the numbering are problems that are reported."""
+    """Return what a folder of slices holds; gaps in the numbering are reported as problems."""
     files = slice_files(folder)
     if not files:
         msg = f"{folder.name}: the folder holds no TIFF file, expected one a plane"
         raise UnusableInputError(msg)
     first = read_tiff(files[0])
     if first.shape[0] != 1 or len(first.channels) != 1:
-        msg = f"{files[0].name}: found {first.shape[0]} planes and {len(first.channels)} channels, expected one plane a file"
+        msg = (
+            f"{files[0].name}: found {first.shape[0]} planes and {len(first.channels)} channels,"
+            " expected one plane a file"
+        )
         raise UnusableInputError(msg)
     numbers = [int(m[-1]) for f in files if (m := re.findall(r"\d+", f.stem))]
     problems = []

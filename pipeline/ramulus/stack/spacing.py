@@ -59,12 +59,16 @@ def combined_spacing(
             if um is not None and not (isfinite(um) and um > 0):
                 known = []
                 if given is None:
-                    msg = f"{name}: the {axis} spacing is {s.value!r} {s.unit} in {s.source}, expected a length > 0; give --spacing-um Z Y X"
+                    msg = (
+                        f"{name}: the {axis} spacing is {s.value!r} {s.unit} in {s.source},"
+                        " expected a length > 0; give --spacing-um Z Y X"
+                    )
                     raise SpacingError(msg)
         for s, um in known[1:]:
             if given is None and abs(um - known[0][1]) > _AGREE * known[0][1]:
                 msg = (
-                    f"{name}: the {axis} spacing is {known[0][1]:.6g} um in {known[0][0].source} but {um:.6g} um"
+                    f"{name}: the {axis} spacing is {known[0][1]:.6g} um in {known[0][0].source}"
+                    f" but {um:.6g} um"
                     f" in {s.source}; give --spacing-um Z Y X"
                 )
                 raise SpacingError(msg)
@@ -74,8 +78,10 @@ def combined_spacing(
                 raise SpacingError(msg)
             if known and abs(given - known[0][1]) > _AGREE * known[0][1] and not override:
                 msg = (
-                    f"{name}: the user's {axis} spacing is {given:.6g} um but {known[0][0].source} says"
-                    f" {known[0][1]:.6g} um; if the header is wrong, say why in input.spacing_override_reason"
+                    f"{name}: the user's {axis} spacing is {given:.6g} um but {known[0][0].source}"
+                    " says"
+                    f" {known[0][1]:.6g} um; if the header is wrong, say why in"
+                    " input.spacing_override_reason"
                 )
                 raise SpacingError(msg)
             values.append(float(given))

@@ -7,7 +7,7 @@ from collections.abc import Iterator
 from contextlib import contextmanager
 from pathlib import Path
 from typing import Any
-from xml.etree import ElementTree
+from xml.etree import ElementTree as ET
 
 import numpy as np
 import tifffile
@@ -35,7 +35,10 @@ def read_tiff(path: Path) -> RawImage:
     except UnusableInputError:
         raise
     except Exception as broken:
-        msg = f"{path.name}: not a readable TIFF ({type(broken).__name__}: {_short(broken)}); expected a complete file"
+        msg = (
+            f"{path.name}: not a readable TIFF ({type(broken).__name__}: {_short(broken)});"
+            " expected a complete file"
+        )
         raise UnusableInputError(msg) from broken
     if found:
         msg = f"{path.name}: the file is damaged or cut short ({_short(found[0])})"
@@ -100,7 +103,8 @@ def _described(path: Path, file: tifffile.TiffFile) -> RawImage:
     if depth == 1 and (n_channels > 4 or n_times > 1):
         swapped = "C" if n_channels > 4 else "T"
         problems.append(
-            f"one plane but {sizes[swapped]} along {swapped}: were the axes swapped when it was saved?"
+            f"one plane but {sizes[swapped]} along {swapped}: were the axes swapped when it was"
+            " saved?"
         )
     if not channels or len(channels) != n_channels:
         channels = [str(k) for k in range(n_channels)]
@@ -139,7 +143,10 @@ def _read(path: Path, axes: str, z_axis: str, channel: int, time_point: int) -> 
     except UnusableInputError:
         raise
     except Exception as broken:
-        msg = f"{path.name}: the pixels cannot be read ({type(broken).__name__}: {_short(broken)}); is the file complete?"
+        msg = (
+            f"{path.name}: the pixels cannot be read ({type(broken).__name__}: {_short(broken)});"
+            " is the file complete?"
+        )
         raise UnusableInputError(msg) from broken
     order = [rest.index(a) for a in (z_axis, "Y", "X") if a]
     planes: np.ndarray = np.transpose(data, order)
@@ -153,10 +160,16 @@ def _check_length(path: Path, file: tifffile.TiffFile, series: Any) -> None:
     page = file.pages[0]
     plain = page.compression == tifffile.COMPRESSION.NONE
     if plain and needed > size:
-        msg = f"{path.name}: the header promises {needed} bytes of pixels, the file holds {size}; it is cut short"
+        msg = (
+            f"{path.name}: the header promises {needed} bytes of pixels, the file holds {size}; it"
+            " is cut short"
+        )
         raise UnusableInputError(msg)
     if not plain and needed > 4096 * max(size, 1):
-        msg = f"{path.name}: the header promises {needed} bytes from a file of {size}; refused as impossible"
+        msg = (
+            f"{path.name}: the header promises {needed} bytes from a file of {size}; refused as"
+            " impossible"
+        )
         raise UnusableInputError(msg)
     if file.is_imagej and len(file.pages) == 1:
         return
@@ -172,8 +185,8 @@ def _ome(xml: str, name: str, found: Found) -> list[str]:
         msg = f"{name}: its OME-XML declares entities, which no image needs; refused"
         raise UnusableInputError(msg)
     try:
-        root = ElementTree.fromstring(xml)  # noqa: S314 - declarations were refused above
-    except ElementTree.ParseError as broken:
+        root = ET.fromstring(xml)  # noqa: S314 - declarations were refused above
+    except ET.ParseError as broken:
         msg = f"{name}: its OME-XML is not well formed ({broken})"
         raise UnusableInputError(msg) from broken
     pixels = next((e for e in root.iter() if e.tag.rsplit("}", 1)[-1] == "Pixels"), None)
