@@ -231,12 +231,14 @@ def _laplacian(
     entries = np.concatenate([value, value, np.ones(n)])
     matrix = sparse.coo_array((entries, (rows, columns)), (n, n)).tocsc()
     matrix.indices, matrix.indptr = matrix.indices.astype(np.int32), matrix.indptr.astype(np.int32)
-    solver = _solver(matrix)
+    solver = _solver(matrix, scale)
     return lambda right: np.asarray(solver(right * scale) * scale)
 
 
-def _solver(matrix: sparse.csc_array) -> Callable[[np.ndarray], Any]:
-    if matrix.shape[0] <= _DIRECT_UP_TO:
+def _solver(matrix: sparse.csc_array, scale: np.ndarray) -> Callable[[np.ndarray], Any]:
+    n = matrix.shape[0]
+    # Factors of a tree take no more room than the tree, whatever its size; those of a mesh fill up.
+    if n <= _DIRECT_UP_TO or (matrix.nnz - n) // 2 < 1.05 * n:
         # The matrix is positive definite: pivots off the diagonal would only fill it up.
         factor = linalg.splu(
             matrix, permc_spec="MMD_AT_PLUS_A", diag_pivot_thresh=0.0,
@@ -245,5 +247,9 @@ def _solver(matrix: sparse.csc_array) -> Callable[[np.ndarray], Any]:
         return factor.solve
     import pyamg  # noqa: PLC0415 - heavy to import, and only for very large networks
 
-    levels = pyamg.ruge_stuben_solver(matrix.tocsr())
-    return lambda right: levels.solve(right, tol=1e-9, accel="cg", maxiter=200)
+    # Even pressures are what plain smoothing leaves over; in scaled unknowns they are 1 / scale.
+    levels = pyamg.smoothed_aggregation_solver(
+        matrix.tocsr(), B=1.0 / scale[:, None], strength=("symmetric", {"theta": 0.08}),
+        smooth=("jacobi", {"weighting": "local"}),  # others start from random numbers
+    )  # fmt: skip
+    return lambda right: levels.solve(right, tol=1e-5, accel="cg", maxiter=300)
