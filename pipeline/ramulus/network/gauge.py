@@ -305,7 +305,7 @@ def _carried(graph, stations, fit, blur, sampler, settings):  # noqa: ANN001, AN
         graph, sampler.volume, spacing_um=sampler.spacing_um, origin_um=tuple(sampler.origin),
         segment=stations["segment"][usable], s_um=stations["s"][usable], centre_um=centre[usable],
         radius_um=radius[usable], contrast=fit.contrast[usable], background=fit.background[usable],
-        sigma_um=blur.sigma_xy_um,
+        sigma_um=float(np.cbrt(blur.sigma_xy_um**2 * blur.sigma_z_um)),
     )  # fmt: skip
     graph, point = recentre(
         graph, segment=stations["segment"][usable], s_um=stations["s"][usable], centre_um=centre[usable],
