@@ -53,7 +53,9 @@ class SegmentRadii:
     sd_um: np.ndarray
 
 
-def analyse_network(graph: CentrelineGraph, settings: "LineSettings", *, blur_um: float) -> Analysis:
+def analyse_network(
+    graph: CentrelineGraph, settings: "LineSettings", *, blur_um: float
+) -> Analysis:
     """Root, order, and solve the network; return all tables and summary figures.
 
     Segments without a radius are left out of ordering and flow (their cells are empty).
@@ -77,7 +79,9 @@ def analyse_network(graph: CentrelineGraph, settings: "LineSettings", *, blur_um
     radii = segment_radii(graph)
     mesh = loop_share > settings.boundary.mesh_share
     order, topological, diameter, found = _orders(rooting, radii, length, settings, mesh)
-    junctions = find_junctions(graph, rooting, radii.mean_um, np.nan_to_num(radii.se_um), common_um=radii.common_um)
+    junctions = find_junctions(
+        graph, rooting, radii.mean_um, np.nan_to_num(radii.se_um), common_um=radii.common_um
+    )
     pooled = summarise_junctions(junctions, settings=settings.junctions)
     graph = _with_kinds(graph, conditions, inlets)
     resistance = _resistance_table(graph, inlets, radii, settings)
@@ -129,9 +133,17 @@ def _resolved(graph: CentrelineGraph, blur_um: float) -> np.ndarray:
 def _flow(graph, inlets: Inlets, loop_share, settings):  # noqa: ANN001, ANN202
     """Conditions and solution, or the reason why there is no flow."""
     try:
-        conditions = boundary_conditions(graph, inlets.nodes, loop_share=loop_share, settings=settings.boundary)
-        diameter = 2 * hindrance_radius_um(graph.segment_length_um(), segment_hindrance_per_um3(graph))
-        return conditions, solve(graph, conditions, viscosity_mpa_s=_viscosity(diameter, settings.viscosity)), ""
+        conditions = boundary_conditions(
+            graph, inlets.nodes, loop_share=loop_share, settings=settings.boundary
+        )
+        diameter = 2 * hindrance_radius_um(
+            graph.segment_length_um(), segment_hindrance_per_um3(graph)
+        )
+        return (
+            conditions,
+            solve(graph, conditions, viscosity_mpa_s=_viscosity(diameter, settings.viscosity)),
+            "",
+        )
     except UnusableInputError as refused:
         if "boundary." in str(refused) and "expected more than" in str(refused):
             raise
@@ -183,21 +195,36 @@ def _orders(rooting, radii, length, settings, mesh):  # noqa: ANN001, ANN202
     number = np.full(m + 1, -1, np.int64)
     number[index] = np.arange(len(index))
     parent = number[rooting.parent[index]]
-    order, topological, element = np.zeros(m, np.int64), np.zeros(m, np.int64), np.full(m, -1, np.int64)
+    order, topological, element = (
+        np.zeros(m, np.int64),
+        np.zeros(m, np.int64),
+        np.full(m, -1, np.int64),
+    )
     if not len(index):
         empty = np.zeros(0)
-        none = DiameterOrders(np.zeros(0, np.int64), empty, empty, empty, 0, True, "no segment to order")
-        return order, topological, none, Elements(element, np.zeros(0, np.int64), empty, empty, empty, np.zeros(0, np.int64))
+        none = DiameterOrders(
+            np.zeros(0, np.int64), empty, empty, empty, 0, True, "no segment to order"
+        )
+        return (
+            order,
+            topological,
+            none,
+            Elements(element, np.zeros(0, np.int64), empty, empty, empty, np.zeros(0, np.int64)),
+        )
     diameter = diameter_orders(parent, 2 * radii.mean_um[index], settings=settings.orders)
     order[index] = diameter.order
     topological[index] = topological_orders(parent).strahler
     found = elements(parent, diameter.order, length[index], 2 * radii.mean_um[index])
     element[index] = found.element_of_segment
-    found = Elements(element, found.order, found.n_segments, found.length_um, found.diameter_um, found.parent)
+    found = Elements(
+        element, found.order, found.n_segments, found.length_um, found.diameter_um, found.parent
+    )
     return order, topological, diameter, found
 
 
-def _with_kinds(graph: CentrelineGraph, conditions: BoundaryConditions | None, inlets: Inlets) -> CentrelineGraph:
+def _with_kinds(
+    graph: CentrelineGraph, conditions: BoundaryConditions | None, inlets: Inlets
+) -> CentrelineGraph:
     kind = graph.node_kind.copy()
     if conditions is not None:
         kind[conditions.outlets] = NODE_KINDS.index("outlet")
@@ -253,7 +280,9 @@ def _maybe(values: np.ndarray) -> Any:
 def _review(graph: CentrelineGraph, radii: SegmentRadii) -> list[str]:
     poor = np.nan_to_num(radii.se_um) > 0.15 * np.nan_to_num(radii.mean_um)
     out = []
-    for text, resolved, bad in zip(graph.segment_review.tolist(), graph.segment_resolved.tolist(), poor.tolist(), strict=True):
+    for text, resolved, bad in zip(
+        graph.segment_review.tolist(), graph.segment_resolved.tolist(), poor.tolist(), strict=True
+    ):
         parts = [text] if text else []
         if not resolved:
             parts.append("too thin to size")
@@ -285,16 +314,23 @@ def _orders_joined(found, order, length, radii, rooting, flow):  # noqa: ANN001,
         mine = order == k
         values = [np.nan] * 5
         if flow is not None:
-            q, mu, r = (a[mine] for a in (np.abs(flow.flow_um3_per_s), flow.viscosity_mpa_s, radii.mean_um))
+            q, mu, r = (
+                a[mine] for a in (np.abs(flow.flow_um3_per_s), flow.viscosity_mpa_s, radii.mean_um)
+            )
             moving = np.isfinite(q) & (q > 0)
             area = np.pi * r**2
             # The mean velocity is that of the blood: flow over area, both summed over the order's vessels.
             values[0] = float(q[moving].sum() / area[moving].sum()) if moving.any() else np.nan
-            entry, leave = flow.pressure_pa[rooting.upstream[mine]], flow.pressure_pa[rooting.downstream[mine]]
+            entry, leave = (
+                flow.pressure_pa[rooting.upstream[mine]],
+                flow.pressure_pa[rooting.downstream[mine]],
+            )
             values[1] = float(np.mean(entry[moving])) if moving.any() else np.nan
             values[2] = float(np.mean(leave[moving])) if moving.any() else np.nan
             values[3] = float(np.nansum(flow.resistance_share[mine]))
-            values[4] = float(np.mean((4e-3 * mu * q / (np.pi * r**3))[moving])) if moving.any() else np.nan
+            values[4] = (
+                float(np.mean((4e-3 * mu * q / (np.pi * r**3))[moving])) if moving.any() else np.nan
+            )
         for name, value in zip(extra, values, strict=True):
             extra[name].append(value)
     return table.assign(**extra)
@@ -335,13 +371,23 @@ def _resistance_table(graph, inlets, radii, settings):  # noqa: ANN001, ANN202
             )  # fmt: skip
     columns = ["outlet_rule", "viscosity", "n_outlets"]
     for name in ("hindrance_per_um3", "resistance_pa_s_per_m3"):
-        columns += [name, f"{name}_low", f"{name}_high", f"{name}_common_low", f"{name}_common_high"]
+        columns += [
+            name,
+            f"{name}_low",
+            f"{name}_high",
+            f"{name}_common_low",
+            f"{name}_common_high",
+        ]
     return pd.DataFrame(rows, columns=columns)
 
 
 def _with_intervals(name, value, share, relative, shared):  # noqa: ANN001, ANN202
-    random = np.exp(_Z * log_resistance_sd(share, relative)) if np.isfinite(relative).any() else np.nan
-    common = np.exp(_Z * log_resistance_common(share, shared)) if np.isfinite(relative).any() else np.nan
+    random = (
+        np.exp(_Z * log_resistance_sd(share, relative)) if np.isfinite(relative).any() else np.nan
+    )
+    common = (
+        np.exp(_Z * log_resistance_common(share, shared)) if np.isfinite(relative).any() else np.nan
+    )
     return {
         name: value, f"{name}_low": value / random, f"{name}_high": value * random,
         f"{name}_common_low": value / common, f"{name}_common_high": value * common,
@@ -349,7 +395,7 @@ def _with_intervals(name, value, share, relative, shared):  # noqa: ANN001, ANN2
 
 
 def _summary(graph, rooting, radii, order, diameter, found, tables, pooled, conditions, flow, no_flow, blur_um,
-             settings):  # noqa: ANN001, ANN202  # fmt: skip
+             settings):  # noqa: ANN001  # fmt: skip
     length = graph.segment_length_um()
     degree = graph.node_degree()
     tips = degree == 1
@@ -427,9 +473,17 @@ def _flow_figures(graph, radii, tables, conditions, flow, no_flow, settings):  #
 
 def _estimate(value, share, relative, shared):  # noqa: ANN001, ANN202
     if not np.isfinite(relative).any():
-        return {"value": value, "low": None, "high": None, "level": 0.95, "reason": "the radii carry no standard errors"}
+        return {
+            "value": value,
+            "low": None,
+            "high": None,
+            "level": 0.95,
+            "reason": "the radii carry no standard errors",
+        }
     spread = np.hypot(log_resistance_sd(share, relative), log_resistance_common(share, shared))
-    return Estimate(value, float(value * np.exp(-_Z * spread)), float(value * np.exp(_Z * spread))).to_json()
+    return Estimate(
+        value, float(value * np.exp(-_Z * spread)), float(value * np.exp(_Z * spread))
+    ).to_json()
 
 
 def _facts(graph, rooting, radii, diameter, tables, pooled, flow, blur_um, loop_share):  # noqa: ANN001, ANN202
@@ -439,7 +493,9 @@ def _facts(graph, rooting, radii, diameter, tables, pooled, flow, blur_um, loop_
     per_part = np.bincount(part[graph.segment_nodes[:, 0]], weights=length)
     tips = degree == 1
     border = tips & _at_border(graph)
-    poor = ~graph.segment_resolved | np.array([bool(t) for t in graph.segment_review.tolist()], dtype=bool)
+    poor = ~graph.segment_resolved | np.array(
+        [bool(t) for t in graph.segment_review.tolist()], dtype=bool
+    )
     facts: dict[str, Any] = {
         "unresolved_share": float(length[~graph.segment_resolved].sum() / max(length.sum(), 1e-12)) if blur_um else None,
         "largest_part_share": float(per_part.max() / max(length.sum(), 1e-12)),
@@ -452,14 +508,25 @@ def _facts(graph, rooting, radii, diameter, tables, pooled, flow, blur_um, loop_
         "orders_not_converged": float(not diameter.converged),
     }  # fmt: skip
     resistance = tables["resistance"]
-    values = resistance.loc[resistance["viscosity"] == "constant", "hindrance_per_um3"].to_numpy() if len(resistance) else np.zeros(0)
+    values = (
+        resistance.loc[resistance["viscosity"] == "constant", "hindrance_per_um3"].to_numpy()
+        if len(resistance)
+        else np.zeros(0)
+    )
     if len(values) > 1:
         facts["outlet_rule_ratio"] = float(values.max() / values.min())
     if flow is not None:
         share = np.nan_to_num(flow.resistance_share)
         with np.errstate(divide="ignore", invalid="ignore"):
             facts["log_resistance_sd"] = log_resistance_sd(share, radii.se_um / radii.mean_um)
-            reynolds = _BLOOD_KG_PER_M3 * 2 * np.abs(flow.flow_um3_per_s) / (np.pi * radii.mean_um) * 1e-12 / (flow.viscosity_mpa_s * 1e-3)
+            reynolds = (
+                _BLOOD_KG_PER_M3
+                * 2
+                * np.abs(flow.flow_um3_per_s)
+                / (np.pi * radii.mean_um)
+                * 1e-12
+                / (flow.viscosity_mpa_s * 1e-3)
+            )
         facts["effective_segments"] = _finite(effective_segments(share))
         facts["poor_resistance_share"] = float(share[poor].sum())
         facts["reynolds_max"] = _finite(float(np.nanmax(reynolds)))
@@ -471,7 +538,9 @@ def _at_border(graph: CentrelineGraph) -> np.ndarray:
     if not any(graph.extent_um):
         return graph.node_kind == NODE_KINDS.index("border")
     spacing, extent = np.asarray(graph.spacing_um), np.asarray(graph.extent_um)
-    gap = np.minimum(graph.node_position_um + spacing / 2, extent - spacing / 2 - graph.node_position_um)
+    gap = np.minimum(
+        graph.node_position_um + spacing / 2, extent - spacing / 2 - graph.node_position_um
+    )
     return (gap <= 1.5 * spacing).any(axis=1)
 
 

@@ -11,6 +11,7 @@ import numpy as np
 import pandas as pd
 
 from ._settings import Settings, setting
+from .analysis import Analysis, analyse_network
 from .errors import UnusableInputError
 from .flow.boundary import BoundarySettings
 from .flow.cost import CostSettings
@@ -28,7 +29,6 @@ from .network.graph import CentrelineGraph
 from .network.trace import trace
 from .stack.open import checked_grey_values
 from .stack.stack import Stack
-from .analysis import Analysis, analyse_network
 from .tree.diameter_orders import OrderSettings
 from .tree.junction_law import JunctionSettings
 from .tree.root import RootSettings
@@ -101,13 +101,35 @@ def analyse(
     fine, grid_um, factors = step("grid", working_grid, volume, spacing_um=stack.spacing_um)
     tubes = step("enhance", enhance, fine, spacing_um=grid_um, settings=settings.enhance)
     area = None if region is None else finer_region(region, factors)
-    found = step("segment", segment, tubes, settings=settings.segment, background=settings.background, region=area)
-    graph, edits = centrelines(found.mask, stack, settings, step, Greys(fine, grid_um, found.background, found.background_level))
-    gauged = step("gauge", gauge, graph, volume, spacing_um=stack.spacing_um, settings=settings.gauge)
-    analysis = step("network", analyse_network, gauged.graph, settings, blur_um=gauged.blur.sigma_xy_um)
+    found = step(
+        "segment",
+        segment,
+        tubes,
+        settings=settings.segment,
+        background=settings.background,
+        region=area,
+    )
+    graph, edits = centrelines(
+        found.mask,
+        stack,
+        settings,
+        step,
+        Greys(fine, grid_um, found.background, found.background_level),
+    )
+    gauged = step(
+        "gauge", gauge, graph, volume, spacing_um=stack.spacing_um, settings=settings.gauge
+    )
+    analysis = step(
+        "network", analyse_network, gauged.graph, settings, blur_um=gauged.blur.sigma_xy_um
+    )
     facts = image_facts(stack, volume, found, tubes, gauged, factors)
-    mask = Mask(np.ascontiguousarray(found.mask.inside[:: factors[0], :: factors[1], :: factors[2]]), stack.spacing_um)
-    return _results(stack, analysis, mask, edits, facts, projections_of(volume), _profiles(found, volume))
+    mask = Mask(
+        np.ascontiguousarray(found.mask.inside[:: factors[0], :: factors[1], :: factors[2]]),
+        stack.spacing_um,
+    )
+    return _results(
+        stack, analysis, mask, edits, facts, projections_of(volume), _profiles(found, volume)
+    )
 
 
 def analyse_mask(stack: Stack, settings: LineSettings, *, step: StepRunner = call) -> Results:
@@ -119,17 +141,28 @@ def analyse_mask(stack: Stack, settings: LineSettings, *, step: StepRunner = cal
         If the mask is empty or full.
     """
     inside = step("read", read_mask, stack)
-    fine, grid_um, _ = step("grid", working_grid, inside.astype(np.float32), spacing_um=stack.spacing_um)
+    fine, grid_um, _ = step(
+        "grid", working_grid, inside.astype(np.float32), spacing_um=stack.spacing_um
+    )
     graph, edits = centrelines(Mask(fine >= 0.5, grid_um), stack, settings, step)
     gauged = step("gauge", gauge, graph, inside.astype(np.float32), spacing_um=stack.spacing_um,
                   settings=settings.gauge, known_levels=True)  # fmt: skip
-    analysis = step("network", analyse_network, gauged.graph, settings, blur_um=gauged.blur.sigma_xy_um)
-    facts = {"anisotropy": max(stack.spacing_um) / min(stack.spacing_um), "mask_fraction": float(inside.mean())}
+    analysis = step(
+        "network", analyse_network, gauged.graph, settings, blur_um=gauged.blur.sigma_xy_um
+    )
+    facts = {
+        "anisotropy": max(stack.spacing_um) / min(stack.spacing_um),
+        "mask_fraction": float(inside.mean()),
+    }
     facts |= _gauge_facts(gauged)
-    return _results(stack, analysis, Mask(inside, stack.spacing_um), edits, facts, projections_of(inside), {})
+    return _results(
+        stack, analysis, Mask(inside, stack.spacing_um), edits, facts, projections_of(inside), {}
+    )
 
 
-def analyse_graph(graph: CentrelineGraph, settings: LineSettings, *, name: str, step: StepRunner = call) -> Results:
+def analyse_graph(
+    graph: CentrelineGraph, settings: LineSettings, *, name: str, step: StepRunner = call
+) -> Results:
     """Analyse a graph whose radii are given: orders, cube law and flow; no image is needed."""
     del name
     if not np.isfinite(graph.point_radius_um).any():
@@ -155,7 +188,9 @@ class Greys:
         index = np.asarray(position_um) / np.asarray(self.grid_um)
         coarse = (index + 0.5) * 0.5**self.level - 0.5
         grey = map_coordinates(self.volume, index.T, output=np.float64, order=1, mode="nearest")
-        return grey - map_coordinates(self.background, coarse.T, output=np.float64, order=1, mode="nearest")
+        return grey - map_coordinates(
+            self.background, coarse.T, output=np.float64, order=1, mode="nearest"
+        )
 
 
 def clean_with_greys(
@@ -173,7 +208,9 @@ def centrelines(
     raw: CentrelineGraph = step("trace", trace, skeleton)
     raw = raw.replace(spacing_um=stack.spacing_um, extent_um=stack.size_um)
     graph, edits = step("clean", clean_with_greys, raw, greys, settings.clean)
-    return step("smooth", smooth, graph, grid_um=mask.spacing_um, settings=settings.centreline), edits
+    return step(
+        "smooth", smooth, graph, grid_um=mask.spacing_um, settings=settings.centreline
+    ), edits
 
 
 def read_bright(stack: Stack, dark: bool) -> np.ndarray:  # noqa: FBT001 - a fact of the image
@@ -209,13 +246,22 @@ def finer_region(region: np.ndarray, factors: tuple[int, int, int]) -> np.ndarra
 
 
 def image_facts(
-    stack: Stack, volume: np.ndarray, found: Segmented, tubes: TubeMap, gauged: Gauged, factors: tuple[int, int, int]
+    stack: Stack,
+    volume: np.ndarray,
+    found: Segmented,
+    tubes: TubeMap,
+    gauged: Gauged,
+    factors: tuple[int, int, int],
 ) -> dict[str, Any]:
     """What the QC flags judge about the image and its segmentation."""
     del tubes
     noise = noise_sd(volume)
     top = volume.max()
-    contrast = float(np.median(gauged.stations["contrast"][gauged.stations["good"]])) if gauged.stations["good"].any() else 0.0
+    contrast = (
+        float(np.median(gauged.stations["contrast"][gauged.stations["good"]]))
+        if gauged.stations["good"].any()
+        else 0.0
+    )
     del factors
     return {
         "anisotropy": max(stack.spacing_um) / min(stack.spacing_um),
@@ -272,7 +318,9 @@ def _results(stack, analysis: Analysis, mask, edits, facts, projections, profile
     if mask is not None:
         summary["vessel_volume_fraction"] = float(mask.inside.mean())
         volume_mm2_per_um3 = float(np.prod(stack.size_um))
-        analysis.summary["length_density_per_mm2"] = analysis.summary["total_length_um"] / volume_mm2_per_um3 * 1e6
+        analysis.summary["length_density_per_mm2"] = (
+            analysis.summary["total_length_um"] / volume_mm2_per_um3 * 1e6
+        )
     bridged = sum(e["op"] == "join" for e in edits)
     spurs = sum(e.get("step") == "spur" for e in edits)
     facts = {**facts, **analysis.facts, "bridged": float(bridged)}

@@ -49,18 +49,35 @@ def timed(command):
 def main(edge):
     with tempfile.TemporaryDirectory() as folder:
         stack = Path(folder) / "stack.tif"
-        make = ["phantom", str(stack), "--set", f"phantom.shape=[{edge}, {edge}, {edge}]", "--quiet"]
+        make = [
+            "phantom",
+            str(stack),
+            "--set",
+            f"phantom.shape=[{edge}, {edge}, {edge}]",
+            "--quiet",
+        ]
         subprocess.run([sys.executable, "-m", "ramulus", *make], check=True)
         sigmas = ["1.0", "2.0", "4.0"]
         measure = [
-            sys.executable, "-m", "ramulus", "measure", str(stack), "--set", f"enhance.sigmas_um=[{', '.join(sigmas)}]",
-            "--set", 'twin.mode="off"', "--quiet", "--out",
+            sys.executable,
+            "-m",
+            "ramulus",
+            "measure",
+            str(stack),
+            "--set",
+            f"enhance.sigmas_um=[{', '.join(sigmas)}]",
+            "--set",
+            'twin.mode="off"',
+            "--quiet",
+            "--out",
         ]
         timed([*measure, str(Path(folder) / "warm")])
         ours = sorted(timed([*measure, str(Path(folder) / f"run{k}")])[0] for k in range(3))[1]
         plain, said = timed([sys.executable, "-c", PLAIN, str(stack), *sigmas])
     print(f"{platform.processor() or platform.machine()}, {os.cpu_count()} cores, {edge}**3 voxels")
-    print(f"measure (median of 3): {ours:.1f} s; plain script: {plain:.1f} s ({' '.join(said.split())}); ratio {plain / ours:.1f}")
+    print(
+        f"measure (median of 3): {ours:.1f} s; plain script: {plain:.1f} s ({' '.join(said.split())}); ratio {plain / ours:.1f}"
+    )
 
 
 if __name__ == "__main__":

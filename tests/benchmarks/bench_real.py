@@ -18,7 +18,12 @@ SAMPLES = {
     "2p_mouse_pial.ome.tif": ["--preset", "two_photon"],
     "2p_rat_arteriole.ome.tif": ["--preset", "two_photon"],
     "2p_mouse_capillary_t1.ome.tif": ["--preset", "two_photon"],
-    "ct_lung_left.nii.gz": ["--preset", "mr_angiography", "--set", f"input.region={VOLUMES / 'ct_lung_left_lungmask.nii.gz'}"],
+    "ct_lung_left.nii.gz": [
+        "--preset",
+        "mr_angiography",
+        "--set",
+        f"input.region={VOLUMES / 'ct_lung_left_lungmask.nii.gz'}",
+    ],
     "cta_head_avm.nii.gz": ["--preset", "mr_angiography"],
     "mra_head.nii.gz": ["--preset", "mr_angiography"],
     # The unit of these two is unknown: 1 mm a voxel is assumed, only ratios mean anything.
@@ -34,11 +39,23 @@ def main(out):
     if not VOLUMES.is_dir():
         print("no real stacks beside the repository: nothing measured")
         return
-    print(f"{'sample':<30} {'voxels':>10} {'segm.':>6} {'junct.':>6} {'loops':>5} {'length mm':>10} {'radius um':>9} {'orders':>6} {'hindrance':>10} {'s':>6} {'MiB':>6}")
+    print(
+        f"{'sample':<30} {'voxels':>10} {'segm.':>6} {'junct.':>6} {'loops':>5} {'length mm':>10} {'radius um':>9} {'orders':>6} {'hindrance':>10} {'s':>6} {'MiB':>6}"
+    )
     for name, options in SAMPLES.items():
         folder = Path(out) / Path(name).name.split(".")[0]
         start = time.perf_counter()
-        command = [sys.executable, "-m", "ramulus", "measure", str(VOLUMES / name), "--out", str(folder), "--quiet", *options]
+        command = [
+            sys.executable,
+            "-m",
+            "ramulus",
+            "measure",
+            str(VOLUMES / name),
+            "--out",
+            str(folder),
+            "--quiet",
+            *options,
+        ]
         done = subprocess.run(command, capture_output=True, text=True, check=False)
         seconds = time.perf_counter() - start
         if done.returncode:
@@ -51,8 +68,13 @@ def main(out):
             voxels *= n
         hindrance = s["network_hindrance_per_um3"]["value"]
         text = f"{hindrance:.3g}" if hindrance else "none"
-        memory = next((v for k, v in run.items() if "memory" in k and isinstance(v, (int, float))), 0)
-        print(f"{name:<30} {voxels:>10} {s['segments']:>6} {s['junctions']:>6} {s['loops']:>5} {s['total_length_um'] / 1000:>10.1f} {s['radius_median_um']:>9.3g} {s['orders']:>6} {text:>10} {seconds:>6.1f} {memory:>6.0f}", flush=True)
+        memory = next(
+            (v for k, v in run.items() if "memory" in k and isinstance(v, (int, float))), 0
+        )
+        print(
+            f"{name:<30} {voxels:>10} {s['segments']:>6} {s['junctions']:>6} {s['loops']:>5} {s['total_length_um'] / 1000:>10.1f} {s['radius_median_um']:>9.3g} {s['orders']:>6} {text:>10} {seconds:>6.1f} {memory:>6.0f}",
+            flush=True,
+        )
 
 
 if __name__ == "__main__":

@@ -26,7 +26,9 @@ def test_eigenvalues_equal_numpys():
         a = rng.normal(size=(3, 3))
         a += a.T
         expected = sorted(np.linalg.eigvalsh(a), key=abs)
-        found = kernels.eigenvalues_by_magnitude(a[0, 0], a[1, 1], a[2, 2], a[0, 1], a[0, 2], a[1, 2])
+        found = kernels.eigenvalues_by_magnitude(
+            a[0, 0], a[1, 1], a[2, 2], a[0, 1], a[0, 2], a[1, 2]
+        )
         np.testing.assert_allclose(found, expected, atol=1e-9)
 
 
@@ -66,7 +68,9 @@ def test_objectness_of_simpleitk_agrees_on_the_axis_and_outside():
     # measures are scaled to their value on the axis.
     image, sigma = tube(3.0, shape=(15, 31, 31)), 2.0
     smooth = itk.SmoothingRecursiveGaussian(itk.GetImageFromArray(image), sigma)
-    other = itk.GetArrayFromImage(itk.ObjectnessMeasure(smooth, objectDimension=1, brightObject=True))
+    other = itk.GetArrayFromImage(
+        itk.ObjectnessMeasure(smooth, objectDimension=1, brightObject=True)
+    )
     found = tube_response(image, spacing_um=UM, sigmas_um=(sigma,), filter="frangi")
     mine, theirs = found[7, 15] / found[7, 15, 15], other[7, 15] / other[7, 15, 15]
     assert np.argmax(mine) == np.argmax(theirs) == 15
@@ -89,7 +93,9 @@ def test_a_scale_answers_the_same_whatever_the_strips():
 
 
 def test_scales_cover_the_radii_and_large_ones_run_on_smaller_levels():
-    found = enhance(tube(4.0), spacing_um=UM, settings=EnhanceSettings(radius_min_um=1.5, radius_max_um=9.0))
+    found = enhance(
+        tube(4.0), spacing_um=UM, settings=EnhanceSettings(radius_min_um=1.5, radius_max_um=9.0)
+    )
     sigmas = [s.sigma_um for s in found.scales]
     assert sigmas[0] == pytest.approx(1.5 / math.sqrt(2))
     assert sigmas[-1] >= 9.0 / math.sqrt(2) / math.sqrt(2)

@@ -3,9 +3,7 @@
 import numpy as np
 import pytest
 
-from ramulus.network.gauge import GaugeSettings, blurred_disc_table, gauge
-from ramulus.phantom.draw import DrawSettings, draw
-from ramulus.phantom.tubes import straight_tube
+from ramulus.network.gauge import blurred_disc_table
 
 
 def test_table_holds_the_blurred_disc():

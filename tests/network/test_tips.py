@@ -25,7 +25,9 @@ def half_level_of_a_drawn_end(radius, sigma):
 @pytest.mark.parametrize("blur_radii", [0.2, 0.5, 0.8])
 def test_the_table_holds_for_a_drawn_end(blur_radii):
     # One cell of ten a radius: the drawing's own error is some hundredths of a radius.
-    assert half_level_radii(blur_radii) == pytest.approx(half_level_of_a_drawn_end(10, 10 * blur_radii), abs=0.03)
+    assert half_level_radii(blur_radii) == pytest.approx(
+        half_level_of_a_drawn_end(10, 10 * blur_radii), abs=0.03
+    )
 
 
 def test_the_limits_are_the_caps_depth_and_its_equal_volume():

@@ -167,7 +167,11 @@ def respond_strip(
     wide = np.empty(nx + len(taps_x), np.float32)
     planes = np.zeros((3, rows, nx + 2), np.float32)
     iz, iy, ix = inverse_um[0], inverse_um[1], inverse_um[2]
-    fz, fy, fx = np.float32(iz * iz * sigma2), np.float32(iy * iy * sigma2), np.float32(ix * ix * sigma2)
+    fz, fy, fx = (
+        np.float32(iz * iz * sigma2),
+        np.float32(iy * iy * sigma2),
+        np.float32(ix * ix * sigma2),
+    )
     fzy, fzx, fyx = 0.25 * iz * iy * sigma2, 0.25 * iz * ix * sigma2, 0.25 * iy * ix * sigma2
     trace = np.empty(nx, np.float32)
     floor32 = np.float32(-floor)

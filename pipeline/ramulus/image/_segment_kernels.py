@@ -67,7 +67,11 @@ def gather_seeds(
                     continue
                 base = sample_clamped(background, bz, by, (x + 0.5) * scale - 0.5)
                 height = light(image, z, y, x) - base
-                if height <= height_low or amplitude < ratio_low * height or amplitude > ratio_high * height:
+                if (
+                    height <= height_low
+                    or amplitude < ratio_low * height
+                    or amplitude > ratio_high * height
+                ):
                     continue
                 w = amplitude * amplitude
                 weight[z // fold, y // fold, x // fold] += w

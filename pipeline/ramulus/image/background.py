@@ -16,11 +16,16 @@ class BackgroundSettings(Settings):
         unit="%", gt=0, lt=100, source="own phantom study",
     )  # fmt: skip
     window_um: float | None = setting(
-        None, "edge of the neighbourhood; absent: 6 of the largest radii looked for", unit="um", gt=0
+        None,
+        "edge of the neighbourhood; absent: 6 of the largest radii looked for",
+        unit="um",
+        gt=0,
     )
 
 
-def background_map(levels: list[Level], *, radius_um: float, settings: BackgroundSettings) -> tuple[np.ndarray, int]:
+def background_map(
+    levels: list[Level], *, radius_um: float, settings: BackgroundSettings
+) -> tuple[np.ndarray, int]:
     """Return the background on the grid of one of the levels, and that level's index.
 
     A low percentile over a window that is wider than any vessel, then a Gaussian; computed on a

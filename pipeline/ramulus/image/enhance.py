@@ -74,7 +74,9 @@ class TubeMap:
         return math.e * response
 
 
-def enhance(volume: np.ndarray, *, spacing_um: tuple[float, float, float], settings: EnhanceSettings) -> TubeMap:
+def enhance(
+    volume: np.ndarray, *, spacing_um: tuple[float, float, float], settings: EnhanceSettings
+) -> TubeMap:
     """Enhance bright tubes over all scales; large scales run on levels of reduced size.
 
     Parameters

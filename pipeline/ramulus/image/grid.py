@@ -71,7 +71,9 @@ def working_grid(
     return volume, (fine[0], fine[1], fine[2]), (factors[0], factors[1], factors[2])
 
 
-def levels_of(volume: np.ndarray, *, spacing_um: tuple[float, float, float], count: int) -> list[Level]:
+def levels_of(
+    volume: np.ndarray, *, spacing_um: tuple[float, float, float], count: int
+) -> list[Level]:
     """Return `count` levels, the first the volume itself, each the 2 x 2 x 2 mean of the last."""
     levels = [Level(0, volume, spacing_um)]
     while len(levels) < count and min(levels[-1].image.shape) >= 2:

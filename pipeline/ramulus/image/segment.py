@@ -25,12 +25,16 @@ _RIVAL = 1.25  # a finer scale this many times stronger takes the place
 class SegmentSettings(Settings):
     """Settings of the segmentation."""
 
-    method: Literal["half_level", "otsu", "li", "triangle", "local_mean", "hysteresis", "fixed"] = setting(
-        "half_level",
-        "where the boundary is: half way between each vessel's own grey level and its background"
-        " (half_level), or a threshold on the grey values",
+    method: Literal["half_level", "otsu", "li", "triangle", "local_mean", "hysteresis", "fixed"] = (
+        setting(
+            "half_level",
+            "where the boundary is: half way between each vessel's own grey level and its background"
+            " (half_level), or a threshold on the grey values",
+        )
     )
-    threshold: float | None = setting(None, "grey value for method fixed, the high one for hysteresis")
+    threshold: float | None = setting(
+        None, "grey value for method fixed, the high one for hysteresis"
+    )
     threshold_low: float | None = setting(None, "low grey value for method hysteresis")
     contrast_min: float = setting(
         0.15, "a vessel counts from this share of the strong vessels' contrast in its planes",
@@ -107,7 +111,9 @@ def segment(
         msg = "segment: no vessel found; expected bright tubes (input.polarity, segment.* may help)"
         raise UnusableInputError(msg)
     mask = Mask(inside, tubes.levels[0].spacing_um, origin_um)
-    return Segmented(mask, base, base_level, reference, {"seeds": float(seeds), "mask_fraction": fraction})
+    return Segmented(
+        mask, base, base_level, reference, {"seeds": float(seeds), "mask_fraction": fraction}
+    )
 
 
 def _reference_contrast(tubes: TubeMap) -> np.ndarray:
@@ -208,7 +214,10 @@ def _mark_strong(strong: np.ndarray, marks: np.ndarray, shift: int) -> None:
     if shift == 0:
         strong |= marks
         return
-    index = [np.minimum(np.arange(n) >> shift, m - 1) for n, m in zip(strong.shape, marks.shape, strict=True)]
+    index = [
+        np.minimum(np.arange(n) >> shift, m - 1)
+        for n, m in zip(strong.shape, marks.shape, strict=True)
+    ]
     strong |= marks[np.ix_(*index)]
 
 
@@ -233,12 +242,15 @@ def _inside(tubes: TubeMap, fields: dict[int, tuple[np.ndarray, np.ndarray]]) ->
     w1, s1 = fields.get(1, (empty, empty))
     inside = np.zeros(image.shape, bool)
     in_threads(
-        lambda a, b: kernels.inside_into(image, w0, s0, w1, s1, margin, a, b, inside), image.shape[0]
+        lambda a, b: kernels.inside_into(image, w0, s0, w1, s1, margin, a, b, inside),
+        image.shape[0],
     )
     return inside
 
 
-def _without_weak_parts(inside: np.ndarray, strong: np.ndarray, settings: SegmentSettings) -> np.ndarray:
+def _without_weak_parts(
+    inside: np.ndarray, strong: np.ndarray, settings: SegmentSettings
+) -> np.ndarray:
     import cc3d  # noqa: PLC0415 - heavy to import
 
     labels, count = cc3d.connected_components(inside, connectivity=26, return_N=True)
@@ -255,7 +267,9 @@ def _kept(labels: np.ndarray, keep: np.ndarray) -> np.ndarray:
     return out
 
 
-def _filled(inside: np.ndarray, settings: SegmentSettings, spacing_um: tuple[float, float, float]) -> np.ndarray:
+def _filled(
+    inside: np.ndarray, settings: SegmentSettings, spacing_um: tuple[float, float, float]
+) -> np.ndarray:
     """Fill cavities: 6-connected background that reaches no face of the volume."""
     import cc3d  # noqa: PLC0415 - heavy to import
 
@@ -263,7 +277,14 @@ def _filled(inside: np.ndarray, settings: SegmentSettings, spacing_um: tuple[flo
     if count <= 1:
         return inside
     keep = np.zeros(count + 1, bool)
-    for face in (labels[0], labels[-1], labels[:, 0], labels[:, -1], labels[:, :, 0], labels[:, :, -1]):
+    for face in (
+        labels[0],
+        labels[-1],
+        labels[:, 0],
+        labels[:, -1],
+        labels[:, :, 0],
+        labels[:, :, -1],
+    ):
         keep[np.unique(face)] = True
     if settings.cavity_max_um3 is not None:
         sizes = np.bincount(labels.ravel(), minlength=count + 1)

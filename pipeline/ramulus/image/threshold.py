@@ -40,7 +40,11 @@ def threshold_mask(
     if method == "local_mean":
         around = ndi.uniform_filter(smooth, window_voxels)
         return smooth > around + 0.2 * float(smooth.std())
-    rule = {"otsu": filters.threshold_otsu, "li": filters.threshold_li, "triangle": filters.threshold_triangle}
+    rule = {
+        "otsu": filters.threshold_otsu,
+        "li": filters.threshold_li,
+        "triangle": filters.threshold_triangle,
+    }
     return smooth > float(rule[method](smooth))
 
 

@@ -39,7 +39,10 @@ def disc(distance, radius, table, out):
     w00, w01, w10, w11 = (1 - a) * (1 - b), (1 - a) * b, a * (1 - b), a * b
     for k in range(3):
         out[k] = (
-            w00 * table[k, i, j] + w01 * table[k, i, j + 1] + w10 * table[k, i + 1, j] + w11 * table[k, i + 1, j + 1]
+            w00 * table[k, i, j]
+            + w01 * table[k, i, j + 1]
+            + w10 * table[k, i + 1, j]
+            + w11 * table[k, i + 1, j + 1]
         )
     out[2] -= out[1]
 
@@ -276,7 +279,9 @@ def fit_disc(values, reach, voxel_area, start_r, sigma_xy, sigma_z, steep, log_c
     accepted = 0
     for iteration in range(16):
         a = math.exp(trial[3])
-        evaluate(column, residual, base, values, trial, pu, pv, steep, free_blur, fixed_levels, table)
+        evaluate(
+            column, residual, base, values, trial, pu, pv, steep, free_blur, fixed_levels, table
+        )
         if iteration == 0 or accepted == 2:
             # Scale from the median residual, never below 4 % of the contrast; weights of a biweight.
             m = 0
@@ -301,7 +306,9 @@ def fit_disc(values, reach, voxel_area, start_r, sigma_xy, sigma_z, steep, log_c
         if contrast_sd > 0.0:
             cost += ((trial[3] - log_contrast) / contrast_sd) ** 2
         if free_blur:
-            cost += ((trial[5] - math.log(sigma_xy)) / 0.7) ** 2 + ((trial[6] - math.log(sigma_z)) / 0.7) ** 2
+            cost += ((trial[5] - math.log(sigma_xy)) / 0.7) ** 2 + (
+                (trial[6] - math.log(sigma_z)) / 0.7
+            ) ** 2
         if cost > best:
             damping *= 8.0
             if damping > 1e5:
@@ -480,7 +487,9 @@ def average_along(segment, s, radius, se, slope, good, diameters, n_segments):
                 m += 1
         if m:
             for k in range(begin, end):
-                half = max(diameters, 0.25) * (radius[k] if good[k] else math.exp(np.median(work[:m])))
+                half = max(diameters, 0.25) * (
+                    radius[k] if good[k] else math.exp(np.median(work[:m]))
+                )
                 # A median over two diameters first: one bad station must not pull its neighbours.
                 c = 0
                 local = np.empty(end - begin)
@@ -517,4 +526,3 @@ def average_along(segment, s, radius, se, slope, good, diameters, n_segments):
                     common[k] = mean[k] * slope_sum / weight_sum
         begin = end
     return mean, error, common
-

@@ -165,7 +165,13 @@ class _Sampler:
         )  # fmt: skip
         in_threads(lambda a, b: kernels.gauge_stations(*arguments, a, b, out, frames), n, parts=32)
         good = (out[:, 11] > 0) & np.isfinite(out[:, :11]).all(axis=1)
-        return _Fit(*(out[:, k] for k in range(4)), out[:, 4:6], *(out[:, k] for k in range(6, 11)), good, frames)
+        return _Fit(
+            *(out[:, k] for k in range(4)),
+            out[:, 4:6],
+            *(out[:, k] for k in range(6, 11)),
+            good,
+            frames,
+        )
 
 
 def _stations(graph: CentrelineGraph, *, step_um: float) -> dict[str, np.ndarray]:
@@ -194,7 +200,9 @@ def _stations(graph: CentrelineGraph, *, step_um: float) -> dict[str, np.ndarray
     }  # fmt: skip
 
 
-def _at(graph: CentrelineGraph, values: np.ndarray, segment: np.ndarray, s: np.ndarray) -> np.ndarray:
+def _at(
+    graph: CentrelineGraph, values: np.ndarray, segment: np.ndarray, s: np.ndarray
+) -> np.ndarray:
     """Per-point values interpolated at arc lengths along given segments."""
     arc = graph.arc_um()
     start = np.concatenate(([0.0], np.cumsum(graph.segment_length_um() + 1.0)[:-1]))
@@ -229,7 +237,9 @@ def _blur(sampler: _Sampler, stations: dict[str, np.ndarray], settings: GaugeSet
     sigma_xy = float(np.median(fit.sigma_xy[good]))
     sigma_z = float(np.median(fit.sigma_z[weight_z])) if weight_z.sum() >= 8 else sigma_xy * z / xy
     spread = 1.4826 * float(np.median(np.abs(np.log(fit.sigma_xy[good] / sigma_xy))))
-    return Blur(sigma_xy, sigma_z, "estimated", max(0.03, spread / np.sqrt(good.sum() / 4)), int(good.sum()))
+    return Blur(
+        sigma_xy, sigma_z, "estimated", max(0.03, spread / np.sqrt(good.sum() / 4)), int(good.sum())
+    )
 
 
 def _thin_again(sampler, stations, blur, fit, prior):  # noqa: ANN001, ANN202
@@ -289,7 +299,9 @@ def _median_slope(x: np.ndarray, y: np.ndarray) -> float:
 def _carried(graph, stations, fit, blur, sampler, settings):  # noqa: ANN001, ANN202
     """Average along each vessel, carry to the points, continue into zones, move the centreline."""
     good = fit.good & (fit.kept > 0.35)
-    good &= (fit.radius > 0.2 * stations["map_um"]) & (fit.radius < 4.0 * stations["map_um"] + blur.sigma_xy_um)
+    good &= (fit.radius > 0.2 * stations["map_um"]) & (
+        fit.radius < 4.0 * stations["map_um"] + blur.sigma_xy_um
+    )
     radius, se, common = kernels.average_along(
         stations["segment"], stations["s"], fit.radius, fit.se, fit.blur_slope, good,
         settings.smooth_diameters, graph.n_segments,
@@ -299,7 +311,9 @@ def _carried(graph, stations, fit, blur, sampler, settings):  # noqa: ANN001, AN
     centre = fit.frames[:, 0].copy()
     if settings.recentre:
         moved = np.einsum("kc,kca->ka", fit.shift, fit.frames[:, 1:])
-        near = good & (np.linalg.norm(moved, axis=1) < np.maximum(0.7 * fit.radius, 1.5 * sampler.step_um))
+        near = good & (
+            np.linalg.norm(moved, axis=1) < np.maximum(0.7 * fit.radius, 1.5 * sampler.step_um)
+        )
         centre[near] += moved[near]
     tip = tip_positions(
         graph, sampler.volume, spacing_um=sampler.spacing_um, origin_um=tuple(sampler.origin),
@@ -319,12 +333,16 @@ def _carried(graph, stations, fit, blur, sampler, settings):  # noqa: ANN001, AN
     # A segment that lies in zones altogether keeps what its stations say.
     whole = np.repeat(high <= low, per)
     zone = ((arc < np.repeat(low, per)) | (arc > np.repeat(high, per))) & ~whole
-    method = np.where(measured, np.where(zone, _METHOD["continued"], _METHOD["fit"]), _METHOD["distance"])
+    method = np.where(
+        measured, np.where(zone, _METHOD["continued"], _METHOD["fit"]), _METHOD["distance"]
+    )
     if sampler.known_levels:
         method = np.where(method == _METHOD["fit"], _METHOD["volume"], method)
     half_voxel = 0.5 * sampler.step_um
     new = graph.replace(
-        point_radius_um=np.where(measured, point[:, 0], np.maximum(graph.point_radius_map_um, half_voxel)),
+        point_radius_um=np.where(
+            measured, point[:, 0], np.maximum(graph.point_radius_map_um, half_voxel)
+        ),
         point_radius_se_um=np.where(measured, point[:, 1], half_voxel),
         point_radius_common_um=np.where(measured, point[:, 2], 0.5 * half_voxel),
         point_method=method.astype(np.int8),

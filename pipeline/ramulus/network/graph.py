@@ -169,7 +169,9 @@ class CentrelineGraph:
         renumber[used] = np.arange(len(used))
         counts = self.points_per_segment[index]
         offsets = np.concatenate(([0], np.cumsum(counts))).astype(np.int64)
-        points = np.repeat(self.point_offsets[index] - offsets[:-1], counts) + np.arange(offsets[-1])
+        points = np.repeat(self.point_offsets[index] - offsets[:-1], counts) + np.arange(
+            offsets[-1]
+        )
         changes: dict[str, Any] = {
             name: getattr(self, name)[points] for name in self.__slots__ if name in _POINT_FIELDS
         }
@@ -326,7 +328,9 @@ class CentrelineGraph:
             np.arange(self.n_points) - np.repeat(self.point_offsets[:-1], self.points_per_segment),
         )  # fmt: skip
         points["radius_um"] = self.point_radius_um
-        points["radius_method"] = np.array(RADIUS_METHODS, dtype=object)[self.point_method].astype(str)
+        points["radius_method"] = np.array(RADIUS_METHODS, dtype=object)[self.point_method].astype(
+            str
+        )
         return {"nodes": nodes, "segments": segments, "points": points}
 
     def _repr_html_(self) -> str:

@@ -63,7 +63,9 @@ def tip_positions(
             place = centre_um[last] + 0.4 * radius[:, None] * (a * u + b * v)
             line = place[:, None, :] + t[None, :, None] * axis[:, None, :]
             index = ((line - np.asarray(origin_um)) / np.asarray(spacing_um)).reshape(-1, 3).T
-            grey += map_coordinates(volume, index, output=np.float64, order=1, mode="nearest").reshape(grey.shape)
+            grey += map_coordinates(
+                volume, index, output=np.float64, order=1, mode="nearest"
+            ).reshape(grey.shape)
         inside = t[None, :] <= np.maximum(0.4 * radius, step)[:, None]
         height = (grey * inside).sum(axis=1) / inside.sum(axis=1) / 5 - background[last]
         above = grey / 5 - (background[last] + 0.5 * np.minimum(height, contrast[last]))[:, None]

@@ -19,7 +19,9 @@ _LONGEST = 3.0
 _SHARE = 0.7
 
 
-def zone_bounds_um(graph: CentrelineGraph, point_radius_um: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+def zone_bounds_um(
+    graph: CentrelineGraph, point_radius_um: np.ndarray
+) -> tuple[np.ndarray, np.ndarray]:
     """Return, for each segment, the arc lengths between which its lumen is its own.
 
     Parameters
@@ -76,7 +78,9 @@ def _pairs_at_nodes(ends: np.ndarray, degree: np.ndarray) -> tuple[np.ndarray, n
 def _leaving_axes(graph: CentrelineGraph, own: np.ndarray) -> np.ndarray:
     """(2 m, 3) unit vectors from each node to the point some two radii along each of its segments."""
     step = graph.segment_length_um() / np.maximum(graph.points_per_segment - 1, 1)
-    reach = np.clip(np.rint(2.5 * own[::2] / np.maximum(step, 1e-9)), 1, graph.points_per_segment - 1).astype(int)
+    reach = np.clip(
+        np.rint(2.5 * own[::2] / np.maximum(step, 1e-9)), 1, graph.points_per_segment - 1
+    ).astype(int)
     axis = np.empty((2 * graph.n_segments, 3))
     start, stop = graph.point_offsets[:-1], graph.point_offsets[1:] - 1
     axis[::2] = graph.point_position_um[start + reach] - graph.point_position_um[start]

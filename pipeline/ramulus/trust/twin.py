@@ -109,7 +109,9 @@ def _whole(shape: tuple[int, int, int]) -> tuple[np.ndarray, np.ndarray]:
     return np.zeros(3, dtype=int), np.asarray(shape)
 
 
-def _crop(graph: CentrelineGraph, shape: tuple[int, int, int], limit: int) -> tuple[np.ndarray, np.ndarray]:
+def _crop(
+    graph: CentrelineGraph, shape: tuple[int, int, int], limit: int
+) -> tuple[np.ndarray, np.ndarray]:
     """Box of at most `limit` voxels, shaped like a cube in um, around the most vessel length."""
     full, spacing = np.asarray(shape), np.asarray(graph.spacing_um)
     if int(np.prod(full)) <= limit:
@@ -123,7 +125,9 @@ def _crop(graph: CentrelineGraph, shape: tuple[int, int, int], limit: int) -> tu
     place = np.rint(graph.point_position_um / spacing).astype(int)
     weight = graph.point_weight_um()
     best, start = -1.0, np.zeros(3, dtype=int)
-    steps = [np.unique(np.linspace(0, f - s, 5).astype(int)) for f, s in zip(full, size, strict=True)]
+    steps = [
+        np.unique(np.linspace(0, f - s, 5).astype(int)) for f, s in zip(full, size, strict=True)
+    ]
     for z in steps[0]:
         for y in steps[1]:
             for x in steps[2]:
@@ -135,7 +139,9 @@ def _crop(graph: CentrelineGraph, shape: tuple[int, int, int], limit: int) -> tu
     return start, start + size
 
 
-def _inside_box(graph: CentrelineGraph, box: tuple[np.ndarray, np.ndarray]) -> tuple[CentrelineGraph, tuple[int, int, int]]:
+def _inside_box(
+    graph: CentrelineGraph, box: tuple[np.ndarray, np.ndarray]
+) -> tuple[CentrelineGraph, tuple[int, int, int]]:
     """Cut the segments at the box and move the origin to its first voxel."""
     spacing = np.asarray(graph.spacing_um)
     low, high = (box[0] - 0.5) * spacing, (box[1] - 0.5) * spacing
@@ -160,12 +166,18 @@ def _inside_box(graph: CentrelineGraph, box: tuple[np.ndarray, np.ndarray]) -> t
             if last - first < 3:
                 continue
             a = node_for(int(graph.segment_nodes[segment, 0]) if first == 0 else None, line[first])
-            b = node_for(int(graph.segment_nodes[segment, 1]) if last == len(line) else None, line[last - 1])
+            b = node_for(
+                int(graph.segment_nodes[segment, 1]) if last == len(line) else None, line[last - 1]
+            )
             lines.append(line[first:last] - low - 0.5 * spacing)
             radii.append(radius[first:last])
             ends.append((a, b))
     if not lines:
-        return graph.select_segments(np.zeros(graph.n_segments, dtype=bool)), (size[0], size[1], size[2])
+        return graph.select_segments(np.zeros(graph.n_segments, dtype=bool)), (
+            size[0],
+            size[1],
+            size[2],
+        )
     position = np.array(nodes) - low - 0.5 * spacing
     cut = CentrelineGraph.from_polylines(
         position, ends, lines, radii, spacing_um=graph.spacing_um,
@@ -199,13 +211,18 @@ def _radius_errors(measured: CentrelineGraph, truth: CentrelineGraph) -> np.ndar
     true = truth.point_radius_um[nearest]
     near = distance <= np.maximum(max(truth.spacing_um), 0.5 * true)
     voxel = min(truth.spacing_um)
-    return np.stack([true[near] / voxel, measured.point_radius_um[use][near] / true[near] - 1], axis=1)
+    return np.stack(
+        [true[near] / voxel, measured.point_radius_um[use][near] / true[near] - 1], axis=1
+    )
 
 
 def _found(measured: CentrelineGraph, truth: CentrelineGraph) -> tuple[float, float, float]:
     """Junction recall, junction precision and length ratio, away from the box's faces."""
     reach = 2 * max(truth.spacing_um)
-    spots = [g.node_position_um[(g.node_degree() >= 3) & _off_faces(g.node_position_um, truth)] for g in (truth, measured)]
+    spots = [
+        g.node_position_um[(g.node_degree() >= 3) & _off_faces(g.node_position_um, truth)]
+        for g in (truth, measured)
+    ]
     radius = np.nanmedian(truth.point_radius_um)
     limit = max(reach, 1.5 * float(radius))
     shares = []
@@ -216,7 +233,11 @@ def _found(measured: CentrelineGraph, truth: CentrelineGraph) -> tuple[float, fl
             shares.append(0.0)
         else:
             shares.append(float((cKDTree(other).query(mine)[0] <= limit).mean()))
-    return shares[0], shares[1], float(measured.segment_length_um().sum() / truth.segment_length_um().sum())
+    return (
+        shares[0],
+        shares[1],
+        float(measured.segment_length_um().sum() / truth.segment_length_um().sum()),
+    )
 
 
 def _off_faces(position: np.ndarray, truth: CentrelineGraph) -> np.ndarray:
@@ -251,4 +272,8 @@ def _summed(errors, ratios, truth, extent, settings):  # noqa: ANN001, ANN202
 
 def _nanmean(values: np.ndarray) -> np.ndarray:
     known = np.isfinite(values)
-    return np.where(known.any(axis=0), np.where(known, values, 0).sum(axis=0) / np.maximum(known.sum(axis=0), 1), np.nan)
+    return np.where(
+        known.any(axis=0),
+        np.where(known, values, 0).sum(axis=0) / np.maximum(known.sum(axis=0), 1),
+        np.nan,
+    )
